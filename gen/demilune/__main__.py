@@ -1,0 +1,5 @@
+"""``python -m demilune``."""
+
+from demilune.cli import main
+
+main()

@@ -1,0 +1,383 @@
+"""With which numbers: element types, accumulators, and whether multiply-adds are fused.
+
+A number is a tuple of real values, one for real types and two (real and imaginary part) for
+complex ones; the order of a complex product is fixed here and nowhere else. An accumulator
+knows how a product is added to a running sum: plainly, in the next wider type, or with the
+error of each step carried along (Dot2: Ogita, Rump, Oishi, "Accurate sum and dot product",
+SIAM J. Sci. Comput. 26(6), 2005, algorithms 3.1, 3.2, 3.3 and 5.3).
+"""
+
+from __future__ import annotations
+
+from collections.abc import Iterator
+from dataclasses import dataclass
+from typing import TYPE_CHECKING
+
+from demilune.keys import key
+from demilune.plan.tree import (
+    Binary,
+    Constant,
+    Convert,
+    Declare,
+    Fma,
+    Function,
+    Local,
+    Negate,
+    Number,
+    Value,
+)
+
+if TYPE_CHECKING:
+    from demilune.plan.writer import Writer
+
+
+@dataclass(frozen=True)
+class NumberType:
+    """An element type: its real type, whether it is complex, and its size in bytes."""
+
+    name: str
+    real: str
+    complex: bool
+    size: int
+    digits: int
+    """Bits of the significand (floating point) or of the magnitude (integers)."""
+    wider: str | None
+    """The real type that holds every product of two elements, if C has one everywhere."""
+
+    @property
+    def parts(self) -> int:
+        return 2 if self.complex else 1
+
+    @property
+    def integer(self) -> bool:
+        return self.real.startswith("int")
+
+
+DTYPES: dict[str, NumberType] = {
+    t.name: t
+    for t in (
+        NumberType("float32", "float32", False, 4, 24, "float64"),
+        NumberType("float64", "float64", False, 8, 53, None),
+        NumberType("complex64", "float32", True, 8, 24, "float64"),
+        NumberType("complex128", "float64", True, 16, 53, None),
+        NumberType("int16", "int16", False, 2, 15, "int32"),
+        NumberType("int32", "int32", False, 4, 31, "int64"),
+    )
+}
+
+REAL_SIZE = {"float32": 4, "float64": 8, "int16": 2, "int32": 4, "int64": 8}
+REAL_DIGITS = {"float32": 24, "float64": 53, "int16": 15, "int32": 31, "int64": 63}
+SPLITTER = {"float32": 2**12 + 1, "float64": 2**27 + 1}
+"""Veltkamp's factor that splits a significand into two halves."""
+
+ACCUMULATORS = {
+    "plain": "each sum is rounded to the element type",
+    "wide": "sums are kept in the next wider type and rounded once",
+    "compensated": "the error of each step is carried along and added at the end (Dot2)",
+    "int32": "sums of integers are kept in 32 bits",
+    "int64": "sums of integers are kept in 64 bits",
+}
+
+
+def binary(operator: str, left: Value, right: Value) -> Value:
+    return Binary(operator, left, right, left.type)
+
+
+def _add(left: Value, right: Value) -> Value:
+    if isinstance(right, Negate):  # x + -y is x - y, bit for bit
+        return binary("-", left, right.operand)
+    return binary("+", left, right)
+
+
+def _negate(value: Value) -> Value:
+    return value.operand if isinstance(value, Negate) else Negate(value, value.type)
+
+
+def add(left: Number, right: Number) -> Number:
+    return tuple(_add(p, q) for p, q in zip(left, right, strict=True))
+
+
+def negate(number: Number) -> Number:
+    return tuple(_negate(part) for part in number)
+
+
+def conjugate(number: Number) -> Number:
+    """The number with its imaginary part negated; a real number as it is."""
+    if len(number) == 1:
+        return number
+    return (number[0], _negate(number[1]))
+
+
+def convert(number: Number, real: str) -> Number:
+    return tuple(part if part.type == real else Convert(part, real) for part in number)
+
+
+def real_terms(left: Number, right: Number, part: int) -> Iterator[tuple[str, Value, Value]]:
+    """The signed real products that make up one part of ``left * right``, in order.
+
+    The sign of a negated factor goes into that of the product, which changes no bit.
+    """
+    for sign, p, q in _terms(left, right, part):
+        minus = (sign == "-") ^ isinstance(p, Negate) ^ isinstance(q, Negate)
+        p = p.operand if isinstance(p, Negate) else p
+        q = q.operand if isinstance(q, Negate) else q
+        yield "-" if minus else "+", p, q
+
+
+def _terms(left: Number, right: Number, part: int) -> Iterator[tuple[str, Value, Value]]:
+    if len(left) == 1 or len(right) == 1:
+        yield "+", left[min(part, len(left) - 1)], right[min(part, len(right) - 1)]
+    elif part == 0:
+        yield "+", left[0], right[0]
+        yield "-", left[1], right[1]
+    else:
+        yield "+", left[0], right[1]
+        yield "+", left[1], right[0]
+
+
+def _signed(sign: str, value: Value) -> Value:
+    return value if sign == "+" else _negate(value)
+
+
+@dataclass(frozen=True)
+class Arithmetic:
+    """The arithmetic of a kernel."""
+
+    dtype: str = key("float64", "type of the elements of A and x", words=tuple(DTYPES))
+    accumulator: str = key("plain", "how sums are kept", words=tuple(ACCUMULATORS))
+    fma: bool = key(False, "whether each multiply-add is fused (rounded once)", flag=True)
+
+    @property
+    def type(self) -> NumberType:
+        """The type of the elements of A and x."""
+        return DTYPES[self.dtype]
+
+    @property
+    def real(self) -> str:
+        """The real type of the elements."""
+        return self.type.real
+
+    @property
+    def sums(self) -> str:
+        """The real type in which sums are kept."""
+        if self.accumulator == "wide":
+            return self.type.wider or self.real
+        if self.accumulator.startswith("int"):
+            return self.accumulator
+        return self.real
+
+    @property
+    def result(self) -> str:
+        """The real type of results: integers keep the accumulator's, which holds the sum."""
+        return self.sums if self.type.integer else self.real
+
+    @property
+    def compensated(self) -> bool:
+        return self.accumulator == "compensated"
+
+    @property
+    def in_place(self) -> bool:
+        """Whether a sum can be kept in an element of the result itself."""
+        return not self.compensated and self.sums == self.result
+
+    @property
+    def cells(self) -> int:
+        """How many numbers one running sum needs."""
+        return 2 if self.compensated else 1
+
+    def problems(self) -> Iterator[tuple[str, str]]:
+        """Pairs of a key and why its value cannot be."""
+        if self.accumulator == "wide" and self.type.wider is None:
+            yield (
+                "accumulator",
+                (
+                    f'"wide" needs a type wider than {self.real}, which C99 does not promise on '
+                    'every machine; use "compensated"'
+                ),
+            )
+        if self.accumulator == "compensated" and self.type.integer:
+            yield (
+                "accumulator",
+                (
+                    '"compensated" carries rounding errors, and integer sums have none; use '
+                    '"plain", "wide", "int32" or "int64"'
+                ),
+            )
+        if self.accumulator.startswith("int"):
+            if not self.type.integer:
+                yield "accumulator", f'"{self.accumulator}" is for integers, not {self.dtype}'
+            elif REAL_SIZE[self.accumulator] < REAL_SIZE[self.real]:
+                yield "accumulator", f"{self.accumulator} is narrower than {self.dtype}"
+        if self.fma and self.type.integer:
+            yield "fma", "integer multiply-adds are exact; leave fma at false"
+
+    # --- products and sums ---------------------------------------------------------------
+
+    def multiply(self, left: Number, right: Number) -> Number:
+        """``left * right``; with ``fma`` the second product of each part is fused."""
+        result = []
+        for part in range(max(len(left), len(right))):
+            total: Value | None = None
+            for sign, p, q in real_terms(left, right, part):
+                if total is None:
+                    total = binary("*", _signed(sign, p), q)
+                elif self.fma:
+                    total = Fma(_signed(sign, p), q, total, p.type)
+                else:
+                    total = binary(sign, total, binary("*", p, q))
+            assert total is not None
+            result.append(total)
+        return tuple(result)
+
+    def multiply_add(self, total: Number, left: Number, right: Number) -> Number:
+        """``total + left * right``; one part of the result for each part of ``total``."""
+        if not self.fma:
+            product = self.multiply(left, right)
+            return add(total, product[: len(total)])
+        result = []
+        for part, value in enumerate(total):
+            for sign, p, q in real_terms(left, right, part):
+                value = Fma(_signed(sign, p), q, value, p.type)
+            result.append(value)
+        return tuple(result)
+
+    def constant(self, number: float | int, real: str) -> Value:
+        return Constant(number, real)
+
+    # --- running sums --------------------------------------------------------------------
+
+    def zero(self, parts: int) -> Number:
+        """A running sum of nothing: ``cells`` numbers, one behind the other."""
+        nought = 0 if self.sums.startswith("int") else 0.0
+        return (Constant(nought, self.sums),) * (parts * self.cells)
+
+    def accumulate(self, w: Writer, total: Number, left: Number, right: Number) -> Number:
+        """The running sum ``total`` after ``left * right`` is added to it.
+
+        ``left`` and ``right`` are in the type of the sums. A compensated step is written to
+        ``w`` and its result is made of new locals.
+        """
+        if not self.compensated:
+            return self.multiply_add(total, left, right)
+        parts = len(total) // 2
+        sums, errors = list(total[:parts]), list(total[parts:])
+        for part in range(parts):
+            for sign, p, q in real_terms(left, right, part):
+                product = w.call(self.two_product(), (_signed(sign, p), q))
+                step = w.call(self.two_sum(), (sums[part], product[0]))
+                sums[part] = step[0]
+                errors[part] = binary("+", errors[part], binary("+", step[1], product[1]))
+        return (*sums, *errors)
+
+    def merge(self, w: Writer, total: Number, other: Number) -> Number:
+        """The compensated sum ``total`` after the compensated sum ``other`` is added to it."""
+        parts = len(total) // 2
+        sums, errors = [], []
+        for part in range(parts):
+            step = w.call(self.two_sum(), (total[part], other[part]))
+            sums.append(step[0])
+            both = binary("+", step[1], other[parts + part])
+            errors.append(binary("+", total[parts + part], both))
+        return (*sums, *errors)
+
+    def total(self, sums: Number) -> Number:
+        """The value of a running sum."""
+        if not self.compensated:
+            return sums
+        half = len(sums) // 2
+        return add(sums[:half], sums[half:])
+
+    # --- helpers of the compensated sum -----------------------------------------------------
+
+    def two_sum(self) -> Function:
+        """The rounded sum and its error (Knuth): 6 operations."""
+        a, b, s, z = (Local(name, self.sums) for name in ("a", "b", "s", "z"))
+        error = binary("+", binary("-", a, binary("-", s, z)), binary("-", b, z))
+        return Function(
+            f"two_sum_{self.sums}",
+            "s + e is exactly a + b, and s is a + b rounded (Knuth).",
+            ("a", "b"),
+            self.sums,
+            (
+                Declare("s", binary("+", a, b), False),
+                Declare("z", binary("-", s, a), False),
+                Declare("e", error, False),
+            ),
+            ("s", "e"),
+        )
+
+    def two_product(self) -> Function:
+        """The rounded product and its error: one fused multiply-add, or Dekker's 17 operations."""
+        a, b, p = (Local(name, self.sums) for name in ("a", "b", "p"))
+        product = Declare("p", binary("*", a, b), False)
+        meaning = "p + e is exactly a * b, and p is a * b rounded"
+        if self.fma:
+            error = Fma(a, b, Negate(p, self.sums), self.sums)
+            body = (product, Declare("e", error, False))
+            return Function(
+                f"two_product_fma_{self.sums}",
+                f"{meaning} (with a fused multiply-add).",
+                ("a", "b"), self.sums, body, ("p", "e"),
+            )  # fmt: skip
+        factor = Constant(float(SPLITTER[self.sums]), self.sums)
+
+        def split(name: str, value: Local) -> tuple[Declare, ...]:
+            scaled, high = Local(f"{name}_scaled", self.sums), Local(f"{name}_high", self.sums)
+            rest = binary("-", scaled, binary("-", scaled, value))
+            return (
+                Declare(scaled.name, binary("*", factor, value), False),
+                Declare(high.name, rest, False),
+                Declare(f"{name}_low", binary("-", value, high), False),
+            )
+
+        ah, al, bh, bl = (Local(name, self.sums) for name in ("a_high", "a_low", "b_high", "b_low"))
+        rest = binary("-", p, binary("*", ah, bh))
+        rest = binary("-", rest, binary("*", al, bh))
+        rest = binary("-", rest, binary("*", ah, bl))
+        error = binary("-", binary("*", al, bl), rest)
+        return Function(
+            f"two_product_{self.sums}",
+            f"{meaning} (Dekker, with Veltkamp's split).",
+            ("a", "b"), self.sums,
+            (product, *split("a", a), *split("b", b), Declare("e", error, False)),
+            ("p", "e"),
+        )  # fmt: skip
+
+    # --- words ---------------------------------------------------------------------------
+
+    @property
+    def statement(self) -> tuple[str, ...]:
+        """The arithmetic contract in sentences, without the order of the sums."""
+        kind = "integer" if self.type.integer else "IEEE 754"
+        lines = [
+            f"Elements are {self.dtype}, sums are kept in {self.sums}; the arithmetic is {kind}."
+        ]
+        if self.type.complex:
+            lines.append(
+                "A complex product p*q has the real part pr*qr - pi*qi and the imaginary part "
+                "pr*qi + pi*qr, in that order."
+            )
+        if self.compensated:
+            lines.append(
+                "Every product and every sum is split into its rounded value s and its error; "
+                "the errors are summed in a second accumulator e, and a sum's value is s + e "
+                "(Dot2: Ogita, Rump, Oishi, SIAM J. Sci. Comput. 26(6), 2005)."
+            )
+            if not self.fma:
+                big = "2^115" if self.sums == "float32" else "2^996"
+                lines.append(
+                    f"Splitting overflows for factors of {big} and above: the result is then "
+                    "not a number, though the exact one may be in range."
+                )
+        if self.fma:
+            lines.append(
+                "Each multiply-add is fused: the product is not rounded before it is added "
+                "(for complex numbers the products of one part follow one another, real by "
+                "real first)."
+            )
+        elif not self.type.integer:
+            lines.append(
+                "Each product is rounded before it is added: no fused multiply-add, no other "
+                "contraction."
+            )
+        return tuple(lines)

@@ -1,0 +1,320 @@
+"""The five levels of the bench, from the sharpest to the broadest."""
+
+from __future__ import annotations
+
+import time
+from collections.abc import Callable, Iterator
+from dataclasses import asdict, dataclass, field, replace
+from typing import Any
+
+import numpy as np
+
+from demilune.arithmetic import REAL_DIGITS
+from demilune.bench import guard
+from demilune.bench.evaluator import Evaluator
+from demilune.bench.problem import (
+    PAD,
+    Draw,
+    Problem,
+    Setting,
+    all_magnitudes,
+    draw_setting,
+    integers,
+    lattice,
+    make_problem,
+    sizes_to_try,
+    uniform,
+)
+from demilune.bench.reference import errors, numpy_product
+from demilune.bench.run import differences, foretell, run_case
+from demilune.keys import RUNTIME
+from demilune.plan.build import Plan
+from demilune.toolchain.executables import CExecutable, Executable
+
+LEVELS = ("exact", "faithful", "bound", "untouched", "calling")
+EXACT_SCALARS = (0.0, 1.0, -1.0, 2.0, -3.0)
+GENERAL_SCALARS = (1.0, -1.0, 2.5, 0.3, -0.7)
+FEW = 3
+"""Failures of one level that are told; the rest is counted."""
+
+
+@dataclass
+class Level:
+    """What one level found."""
+
+    name: str
+    cases: int = 0
+    failures: list[str] = field(default_factory=list)
+    failed: int = 0
+    skipped: str = ""
+    facts: dict[str, Any] = field(default_factory=dict)
+
+    @property
+    def verdict(self) -> str:
+        if self.failed:
+            return "failed"
+        return "skipped" if self.skipped and not self.cases else "passed"
+
+    def fail(self, message: str) -> None:
+        self.failed += 1
+        if len(self.failures) < FEW:
+            self.failures.append(message)
+
+
+@dataclass
+class Verdict:
+    """What the bench found of one kernel."""
+
+    kernel: str
+    language: str
+    seed: int
+    levels: list[Level]
+    seconds: float = 0.0
+
+    @property
+    def verified(self) -> bool:
+        """Whether every level that applies holds, and at least one of the first two does."""
+        ran = {level.name for level in self.levels if level.verdict == "passed"}
+        return not any(level.failed for level in self.levels) and bool(ran & {"exact", "faithful"})
+
+    @property
+    def cases(self) -> int:
+        return sum(level.cases for level in self.levels)
+
+    def record(self) -> dict[str, Any]:
+        """The verdict as plain data, without times, so that equal runs give equal records."""
+        levels = [{**asdict(level), "verdict": level.verdict} for level in self.levels]
+        return {
+            "kernel": self.kernel, "language": self.language, "seed": self.seed,
+            "verified": self.verified, "cases": self.cases, "levels": levels,
+        }  # fmt: skip
+
+
+def verify(plan: Plan, executable: Executable, seed: int = 1) -> Verdict:
+    """Runs all levels on a kernel; the same seed gives the same inputs."""
+    start = time.perf_counter()
+    bench = _Bench(plan, executable, seed)
+    checks: tuple[Callable[[Level], None], ...] = (
+        bench.exact, bench.faithful, bench.bound, bench.untouched, bench.calling,
+    )  # fmt: skip
+    levels = []
+    for name, check in zip(LEVELS, checks, strict=True):
+        level = Level(name)
+        check(level)
+        levels.append(level)
+    verdict = Verdict(plan.spec.name, plan.spec.language, seed, levels)
+    verdict.seconds = time.perf_counter() - start
+    return verdict
+
+
+class _Bench:
+    def __init__(self, plan: Plan, executable: Executable, seed: int) -> None:
+        self.plan, self.executable, self.seed = plan, executable, seed
+        self.spec = plan.spec
+        self.evaluator = Evaluator(plan)
+        self.sizes = sizes_to_try(plan)
+        self.fast = isinstance(executable, CExecutable)
+        self.large = max(self.sizes) > 64
+
+    def _problems(
+        self,
+        level: str,
+        draw: Callable[[Setting], Draw],
+        scalars: tuple[float, ...],
+        lanes: int,
+        sizes: list[int] | None = None,
+    ) -> Iterator[Problem]:
+        generator = np.random.default_rng([self.seed, LEVELS.index(level)])
+        for n in self.sizes if sizes is None else sizes:
+            setting = draw_setting(self.plan, n, generator, scalars)
+            yield make_problem(self.plan, setting, draw(setting), generator, lanes)
+
+    def _compare(self, level: Level, problem: Problem, expected: Any, by_value: bool) -> None:
+        for lane in range(problem.lanes):
+            found = run_case(self.executable, problem, lane)
+            level.cases += 1
+            for message in differences(problem, expected, found, lane, by_value=by_value):
+                level.fail(message)
+
+    # --- 1 ---------------------------------------------------------------------------------
+
+    def exact(self, level: Level) -> None:
+        """Every partial sum representable: any order gives the numpy product, bit for bit."""
+        for name in ("alpha", "beta"):
+            value = getattr(self.spec.operation, name, RUNTIME)
+            if value != RUNTIME and value != int(value):
+                level.skipped = f"{name} = {value} makes products that are not representable"
+                return
+        if self.spec.operation.name == "quadform" and self._largest(max(self.sizes), {}) < 1:
+            level.skipped = "n is too large for sums of three factors to be representable"
+            return
+
+        def draw(setting: Setting) -> Draw:
+            scalars = {k: int(abs(v.real) + abs(v.imag)) for k, v in setting.scalars.items()}
+            largest = self._largest(setting.n, {k: max(1, v) for k, v in scalars.items()})
+            level.facts[f"largest element for n = {setting.n}"] = largest
+            return lattice(largest)
+
+        lanes = 1 if self.large else 3 if self.fast else 2
+        for problem in self._problems("exact", draw, EXACT_SCALARS, lanes):
+            self._compare(level, problem, numpy_product(problem), by_value=True)
+
+    def _largest(self, n: int, scalars: dict[str, int]) -> int:
+        """The largest whole number for which no partial sum needs rounding."""
+        arithmetic, operation = self.spec.arithmetic, self.spec.operation
+        digits = REAL_DIGITS[operation.narrowest(arithmetic)]
+        if arithmetic.type.complex:  # a product of complex numbers has two terms
+            n, digits = 2 * n, digits - (2 if operation.name != "matvec" else 1)
+        largest = operation.limit(max(n, 1), digits, scalars)
+        return min(largest, 2 ** REAL_DIGITS[arithmetic.real] - 1)
+
+    # --- 2 ---------------------------------------------------------------------------------
+
+    def faithful(self, level: Level) -> None:
+        """Inputs of every magnitude: bit for bit what the plan foretells."""
+        real = self.spec.arithmetic.real
+        integer = self.spec.arithmetic.type.integer
+
+        def draw(setting: Setting) -> Draw:
+            if not integer:
+                return all_magnitudes(real)
+            scalars = {k: max(1, int(abs(v.real))) for k, v in setting.scalars.items()}
+            return integers(self._largest(setting.n, scalars))
+
+        lanes = 6 if not self.large else 3
+        scalars = EXACT_SCALARS if integer else GENERAL_SCALARS
+        for problem in self._problems("faithful", draw, scalars, lanes):
+            self._compare(level, problem, foretell(self.evaluator, problem), by_value=False)
+
+    # --- 3 ---------------------------------------------------------------------------------
+
+    def bound(self, level: Level) -> None:
+        """The error against exact rationals stays under the published bound."""
+        if self.spec.arithmetic.type.integer:
+            level.skipped = "integer arithmetic has no rounding errors"
+            return
+        sizes = [n for n in self.sizes if n <= 24][-4:]
+        if not sizes:
+            level.skipped = "n is too large for exact rationals; levels 1 and 2 hold the bits"
+            return
+        worst, ulps = 0.0, 0.0
+        for problem in self._problems("bound", lambda _: uniform, GENERAL_SCALARS, 1, sizes):
+            found = run_case(self.executable, problem, 0)
+            level.cases += 1
+            ratio, distance = errors(problem, found, 0)
+            worst, ulps = max(worst, ratio), max(ulps, distance)
+            if not ratio <= 1:
+                level.fail(f"{problem.setting}: the error is {ratio:.3g} times the bound")
+        level.facts |= {"largest error / bound": worst, "largest error in ulps": ulps}
+
+    # --- 4 ---------------------------------------------------------------------------------
+
+    def untouched(self, level: Level) -> None:
+        """Nothing unused is read or written: watched accesses, or guard pages, and poison."""
+        draw = self._plain
+        sizes = self.sizes[-2:] if not self.large else self.sizes[-1:]
+        problems = list(self._problems("untouched", draw, GENERAL_SCALARS, 1, sizes))
+        problems += [
+            make_problem(self.plan, setting, draw(setting), np.random.default_rng(self.seed), 1)
+            for setting in self._zero_scalars()
+        ]
+        for problem in problems:
+            self._nothing_read(problem)
+        if not self.fast:
+            level.cases += len(problems)
+            for message in guard.unused_touched(self.executable, problems):
+                level.fail(message)
+        elif guard.AVAILABLE:
+            level.cases += 2 * len(problems)
+            for message in guard.outside_touched(self.executable, problems):
+                level.fail(message)
+        else:
+            level.facts["guard pages"] = guard.WHY_NOT
+        for problem in problems:
+            self._compare(level, problem, foretell(self.evaluator, problem), by_value=False)
+
+    def _plain(self, setting: Setting) -> Draw:
+        if not self.spec.arithmetic.type.integer:
+            return uniform
+        scalars = {k: max(1, int(abs(v.real))) for k, v in setting.scalars.items()}
+        return integers(self._largest(setting.n, scalars))
+
+    def _zero_scalars(self) -> Iterator[Setting]:
+        """Settings in which a scalar passed at run time is zero."""
+        passed = [one.name for one in self.plan.parameters if one.kind == "scalar"]
+        generator = np.random.default_rng([self.seed, 9])
+        for n in self.sizes[-1:]:
+            for name in passed:
+                setting = draw_setting(self.plan, n, generator, EXACT_SCALARS[1:])
+                yield replace(setting, scalars={**setting.scalars, name: 0})
+            if len(passed) == 2:
+                setting = draw_setting(self.plan, n, generator, EXACT_SCALARS[1:])
+                yield replace(setting, scalars=dict.fromkeys(passed, 0))
+
+    def _nothing_read(self, problem: Problem) -> None:
+        """Poisons the values of what must not be read because a scalar is zero."""
+        scalars = problem.setting.scalars
+        poison = "float" in problem.plan.spec.arithmetic.real
+        if scalars.get("beta", 1) == 0 and "y" in problem.buffers and poison:
+            problem.buffers["y"][...] = np.nan
+        if scalars.get("alpha", 1) == 0 and poison:
+            names = ("x",) if problem.plan.spec.operation.name == "rank1" else ("a", "x")
+            for name in names:
+                problem.buffers[name][...] = np.nan
+
+    # --- 5 ---------------------------------------------------------------------------------
+
+    def calling(self, level: Level) -> None:
+        """Empty and tiny matrices, every kind of scalar, bad arguments."""
+        scalars = EXACT_SCALARS
+        runtime = self.spec.layout.n == RUNTIME
+        small = [0, 1, 2] if runtime else self.sizes[:1]
+        if not self.large:
+            for problem in self._problems("calling", self._plain, scalars, 1, small * 3):
+                self._compare(level, problem, foretell(self.evaluator, problem), by_value=False)
+        generator = np.random.default_rng([self.seed, 8])
+        setting = draw_setting(self.plan, self.sizes[0], generator, scalars)
+        draw = self._plain(setting)
+        for name, value in self._bad_arguments(setting):
+            problem = make_problem(self.plan, setting, draw, generator, 1)
+            problem.setting = replace(setting, sizes={**setting.sizes, name: value})
+            self._refused(level, problem, name)
+        if not level.cases:
+            level.skipped = "nothing but arrays is passed"
+
+    def _bad_arguments(self, setting: Setting) -> Iterator[tuple[str, int]]:
+        names = {one.name for one in self.plan.parameters if one.kind == "size"}
+        bad = {"n": -1, "kd": -1, "incx": 0, "incy": 0}
+        if "ld" in names:
+            leading = setting.sizes["ld"]
+            least = setting.sizes["kd"] + 1 if "kd" in setting.sizes else max(1, setting.n)
+            bad["ld"] = min(leading, least) - 1
+            kd = getattr(self.spec.layout, "kd", None)
+            if kd not in (None, RUNTIME):
+                bad["ld"] = int(kd)
+        yield from ((name, value) for name, value in bad.items() if name in names)
+
+    def _refused(self, level: Level, problem: Problem, name: str) -> None:
+        arrays = {
+            key: np.ascontiguousarray(buffer[:, :, 0]) for key, buffer in problem.buffers.items()
+        }
+        level.cases += 1
+        refused = call_flat(self.executable, problem, arrays)
+        if refused != name:
+            level.fail(f"{problem.setting}: {name} is not refused (refused: {refused})")
+        for key, buffer in problem.buffers.items():
+            if arrays[key].tobytes() != np.ascontiguousarray(buffer[:, :, 0]).tobytes():
+                level.fail(f"{problem.setting}: {key} is written though {name} is refused")
+
+
+def call_flat(executable: Executable, problem: Problem, arrays: dict[str, Any]) -> str | None:
+    """Calls a kernel with buffers of parts, in place."""
+    from demilune.bench.run import arguments_of
+
+    flat = {}
+    for name, one in problem.plan.arrays.items():
+        array = arrays[name].reshape(-1)
+        if one.complex:
+            array = array.view("complex64" if one.type == "float32" else "complex128")
+        flat[name] = array[PAD:]
+    return executable(arguments_of(problem, flat))

@@ -1,0 +1,5 @@
+"""The command line: a thin layer over the library."""
+
+from demilune.cli.commands import main
+
+__all__ = ["main"]

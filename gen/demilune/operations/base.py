@@ -1,0 +1,273 @@
+"""What an operation tells: its parameters, and what is done with each strip and element.
+
+The plan visits strips and elements in the order that the schedule asks for and calls the
+operation at each: :meth:`Operation.open` and :meth:`Operation.close` around a strip,
+:meth:`Operation.element` for the elements that meet index m, :meth:`Operation.diagonal`.
+An operation never sees an index formula and never decides an order.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Iterator, Mapping
+from dataclasses import dataclass, field
+from math import isfinite
+from typing import ClassVar
+
+import numpy as np
+
+from demilune.arithmetic import REAL_SIZE, Arithmetic, conjugate, convert, negate
+from demilune.index import Compare, Expr, Term, choice, expr, symbol
+from demilune.keys import RUNTIME, key
+from demilune.layouts import Layout
+from demilune.plan.tree import Constant, Load, Local, Number, Parameter
+from demilune.plan.writer import PARTS, Writer
+from demilune.schedules import LoopOrder
+
+Scalar = float | int | str
+"""A number, or ``"runtime"``."""
+
+
+@dataclass
+class Strip:
+    """A strip that is being worked on: its index and the locals that belong to it."""
+
+    k: Expr
+    factor: Number = ()
+    sum: Number = ()
+    diagonal: Number = ()
+
+
+@dataclass(frozen=True)
+class Vector:
+    """A vector with a stride: element i lies at start + i*stride (BLAS standard)."""
+
+    array: str
+    start: Expr
+    stride: Expr
+    type: str
+    complex: bool
+
+    def at(self, i: Term) -> Expr:
+        return self.start + expr(i) * self.stride
+
+
+@dataclass
+class Context:
+    """Where an operation writes, and what the other choices are."""
+
+    w: Writer
+    layout: Layout
+    arithmetic: Arithmetic
+    order: LoopOrder
+    vectors: dict[str, Vector] = field(default_factory=dict)
+    totals: Number = ()
+    """A running sum over all strips, of an operation that has one."""
+
+    @property
+    def n(self) -> Expr:
+        return self.layout.size
+
+    @property
+    def parts(self) -> int:
+        return self.arithmetic.type.parts
+
+    def load(self, array: str, index: Expr, type: str, complex: bool) -> Number:
+        """The element of an array, as a number."""
+        if not complex:
+            return (Load(array, index, type),)
+        return tuple(Load(array, index, type, part) for part in (0, 1))
+
+    def matrix(self, index: Expr) -> Number:
+        """The stored element at ``index``, in the type of the sums."""
+        a = self.arithmetic
+        return convert(self.load("a", index, a.real, a.type.complex), a.sums)
+
+    def on_diagonal(self, index: Expr) -> Number:
+        """The diagonal element at ``index``; of a Hermitian matrix only its real part is read."""
+        number = self.matrix(index)
+        return number[:1] if self.layout.hermitian else number
+
+    def vector(self, name: str, i: Term) -> Number:
+        """Element ``i`` of a vector, in its own type."""
+        v = self.vectors[name]
+        return self.load(v.array, v.at(i), v.type, v.complex)
+
+    def term(self, name: str, i: Term) -> Number:
+        """Element ``i`` of a vector, in the type of the sums."""
+        return convert(self.vector(name, i), self.arithmetic.sums)
+
+    def put(self, name: str, i: Term, number: Number) -> None:
+        """Writes element ``i`` of a vector, rounded to its type."""
+        v = self.vectors[name]
+        self.w.store(v.array, v.at(i), convert(number, v.type))
+
+    def in_row(self, number: Number, own: bool) -> Number:
+        """A(k,m) from the element that is stored for it; ``own`` if it lies in strip k."""
+        return conjugate(number) if self._stored_for_column(own) else number
+
+    def in_column(self, number: Number, own: bool) -> Number:
+        """A(m,k) from the element that is stored for it; ``own`` if it lies in strip k."""
+        hermitian = self.layout.hermitian
+        return conjugate(number) if hermitian and not self._stored_for_column(own) else number
+
+    def _stored_for_column(self, own: bool) -> bool:
+        # Stored column by column, an element of strip k at index m is A(m,k).
+        return self.layout.hermitian and own == (self.layout.order == "column-major")
+
+    @property
+    def reused(self) -> bool:
+        """Whether a number is used more than once in one step, and so belongs in a local."""
+        return self.parts > 1 or self.arithmetic.compensated
+
+
+@dataclass(frozen=True)
+class Operation:
+    """What is computed."""
+
+    name: ClassVar[str]
+    rank: ClassVar[int] = 9
+    summary: ClassVar[str]
+    formula: ClassVar[str]
+    loops: ClassVar[tuple[str, ...]]
+    """Loop orders that make sense, the default first."""
+    why: ClassVar[str]
+    """Why the others do not."""
+    sums: ClassVar[bool] = True
+    """Whether there are sums, which an accumulator keeps."""
+    mirrored: ClassVar[bool] = True
+    """Whether mirrored elements matter (else each stored element is visited once)."""
+
+    incx: int | str = key(
+        1, "stride of x", words=(RUNTIME,), whole=True, nonzero=True, minimum=-1024, maximum=1024
+    )
+
+    # --- to be told by each operation ---------------------------------------------------------
+
+    def parameters(
+        self, matrix: Parameter, layout: Layout, arithmetic: Arithmetic, order: LoopOrder
+    ) -> tuple[Parameter, ...]:
+        """All parameters, in order; ``matrix`` is the array of the half."""
+        raise NotImplementedError
+
+    def prologue(self, c: Context) -> None:
+        """What is done before the first strip."""
+
+    def open(self, c: Context, k: Expr) -> Strip:
+        """Starts strip k."""
+        raise NotImplementedError
+
+    def element(self, c: Context, m: Expr, strips: list[tuple[Strip, Expr]], own: bool) -> None:
+        """The off-diagonal elements of some rows that meet index m, each with its place."""
+        raise NotImplementedError
+
+    def diagonal(self, c: Context, strip: Strip, place: Expr) -> None:
+        """The diagonal element of a strip."""
+        raise NotImplementedError
+
+    def close(self, c: Context, strip: Strip) -> None:
+        """Ends a strip."""
+
+    def epilogue(self, c: Context) -> None:
+        """What is done after the last strip."""
+
+    def statement(self, c: Context, backward: bool, block: int) -> tuple[str, ...]:
+        """The order of the sums in sentences, for the header."""
+        raise NotImplementedError
+
+    def limit(self, n: int, digits: int, scalars: Mapping[str, int]) -> int:
+        """The largest magnitude of integer inputs that cannot overflow ``digits`` bits.
+
+        ``scalars`` holds the magnitudes of alpha and beta.
+        """
+        raise NotImplementedError
+
+    def limit_rule(self, digits: int) -> str:
+        """The same as an inequality in n and the magnitude M of all elements."""
+        raise NotImplementedError
+
+    def narrowest(self, arithmetic: Arithmetic) -> str:
+        """The integer type that results and sums must fit into."""
+        return arithmetic.sums
+
+    def problems(self, arithmetic: Arithmetic) -> Iterator[tuple[str, str]]:
+        """Pairs of a key and why its value cannot be."""
+        for name in ("alpha", "beta"):
+            value = getattr(self, name, RUNTIME)
+            if value == RUNTIME:
+                continue
+            if not arithmetic.type.integer:
+                if not isfinite(rounded(value, arithmetic.real)):
+                    yield name, f"{value} is too large for {arithmetic.real}"
+                elif value != 0 and rounded(value, arithmetic.real) == 0:
+                    yield name, f"{value} is too small for {arithmetic.real}: it becomes 0"
+            elif value != int(value):
+                yield name, f"{value} is no whole number, and {arithmetic.dtype} holds no other"
+            elif abs(value) >= 2 ** (8 * REAL_SIZE[arithmetic.result] - 1):
+                yield name, f"{value} does not fit into {arithmetic.result}"
+
+    # --- shared ------------------------------------------------------------------------------
+
+    def scalar_parameter(
+        self, name: str, meaning: str, arithmetic: Arithmetic, complex: bool
+    ) -> tuple[Parameter, ...]:
+        """The parameter for a scalar that is passed at run time, if it is."""
+        if getattr(self, name) != RUNTIME:
+            return ()
+        return (Parameter(name, "scalar", meaning, arithmetic.result, complex),)
+
+    def scalar(self, c: Context, name: str, complex: bool) -> Number:
+        """The scalar as a number in the type of the sums."""
+        value, real = getattr(self, name), c.arithmetic.result
+        if value != RUNTIME:
+            exact = int(value) if c.arithmetic.type.integer else rounded(value, real)
+            return convert((Constant(exact, real),), c.arithmetic.sums)
+        if not complex:
+            return convert((Local(name, real),), c.arithmetic.sums)
+        return convert(tuple(Local(name + part, real) for part in PARTS), c.arithmetic.sums)
+
+    def vector_parameters(
+        self, name: str, meaning: str, layout: Layout, type: str, complex: bool, use: str
+    ) -> tuple[Parameter, ...]:
+        """The parameters of a vector: the array, and its stride where that is passed."""
+        stride = getattr(self, f"inc{name}")
+        step = symbol(f"inc{name}") if stride == RUNTIME else expr(int(stride))
+        size = choice(Compare(step, "<", expr(0)), -step, step)
+        extent = 1 + (layout.size - 1) * size
+        array = Parameter(name, "array", meaning, type, complex, extent, use)
+        if stride != RUNTIME:
+            return (array,)
+        return array, Parameter(f"inc{name}", "size", f"stride of {name}, in elements")
+
+    def name_vector(self, c: Context, name: str, type: str) -> None:
+        """Makes a vector known to ``c``, with the start that its stride has."""
+        stride = getattr(self, f"inc{name}")
+        step = symbol(f"inc{name}") if stride == RUNTIME else expr(int(stride))
+        back = choice(Compare(step, "<", expr(0)), (1 - c.n) * step, 0)
+        start = c.w.integer(f"start_{name}", back)
+        c.vectors[name] = Vector(name, start, step, type, c.parts == 2)
+
+    def stride_rules(self) -> Iterator[tuple[Compare, str, str]]:
+        """Conditions under which a stride is refused."""
+        for name in ("incx", "incy"):
+            if getattr(self, name, 1) == RUNTIME:
+                yield Compare(symbol(name), "==", expr(0)), name, "other than 0"
+
+
+def rounded(value: float | str, real: str) -> float:
+    """The number rounded to a floating-point type; infinite if it is too large."""
+    with np.errstate(over="ignore"):
+        return float(np.dtype(real).type(value))
+
+
+def scaled(c: Context, factor: Number, number: Number) -> Number:
+    """``factor * number``; a factor of 1 or -1 costs no product."""
+    first = factor[0]
+    if len(factor) == 1 and isinstance(first, Constant) and first.value in (1, -1):
+        return number if first.value == 1 else negate(number)
+    return c.arithmetic.multiply(factor, number)
+
+
+def is_unit(factor: Number) -> bool:
+    """Whether the factor is a constant 1 or -1."""
+    first = factor[0]
+    return len(factor) == 1 and isinstance(first, Constant) and first.value in (1, -1)

@@ -1,0 +1,109 @@
+"""s := x^T*A*x, or x^H*A*x for a Hermitian matrix, which is real."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from dataclasses import dataclass
+from typing import ClassVar
+
+from demilune.arithmetic import Arithmetic, add, conjugate, convert
+from demilune.index import Expr, expr
+from demilune.layouts import Layout
+from demilune.operations.base import Context, Operation, Strip
+from demilune.plan.tree import Number, Parameter
+from demilune.schedules import LoopOrder
+
+
+@dataclass(frozen=True)
+class QuadForm(Operation):
+    """The quadratic form of the matrix."""
+
+    name: ClassVar[str] = "quadform"
+    rank: ClassVar[int] = 3
+    summary: ClassVar[str] = "quadratic form"
+    formula: ClassVar[str] = "s := x^T*A*x (x^H*A*x, a real number, if Hermitian)"
+    loops: ClassVar[tuple[str, ...]] = ("fused", "dot")
+    why: ClassVar[str] = "its result is one number, and axpy scatters into a vector"
+
+    def parameters(
+        self, matrix: Parameter, layout: Layout, arithmetic: Arithmetic, order: LoopOrder
+    ) -> tuple[Parameter, ...]:
+        complex = arithmetic.type.complex
+        result = Parameter(
+            "s", "array", "the result, one element", arithmetic.result,
+            complex and not layout.hermitian, expr(1), "out",
+        )  # fmt: skip
+        return (
+            matrix,
+            *layout.after(),
+            *self.vector_parameters("x", "the vector x", layout, arithmetic.real, complex, "in"),
+            result,
+        )
+
+    def _parts(self, c: Context) -> int:
+        return 1 if c.layout.hermitian else c.parts
+
+    def prologue(self, c: Context) -> None:
+        self.name_vector(c, "x", c.arithmetic.real)
+        parts = self._parts(c)
+        c.totals = c.w.running("sum", c.arithmetic.zero(parts), parts)
+
+    def open(self, c: Context, k: Expr) -> Strip:
+        return Strip(k, sum=c.w.running("acc", c.arithmetic.zero(c.parts), c.parts))
+
+    def element(self, c: Context, m: Expr, strips: list[tuple[Strip, Expr]], own: bool) -> None:
+        x = c.term("x", m)
+        x = c.w.bind("xm", x) if len(strips) > 1 or c.reused else x
+        for strip, place in strips:
+            stored = c.matrix(place)
+            stored = c.w.bind("akm", stored) if c.reused else stored
+            row = c.in_row(stored, own)
+            c.w.assign(strip.sum, c.arithmetic.accumulate(c.w, strip.sum, row, x))
+
+    def diagonal(self, c: Context, strip: Strip, place: Expr) -> None:
+        d = c.w.bind("akk", c.on_diagonal(place))
+        if not c.order.mirrored:
+            strip.diagonal = d
+            return
+        x = c.term("x", strip.k)
+        x = c.w.bind("xk", x) if c.reused else x
+        c.w.assign(strip.sum, c.arithmetic.accumulate(c.w, strip.sum, d, x))
+
+    def close(self, c: Context, strip: Strip) -> None:
+        a, w = c.arithmetic, c.w
+        x = w.bind("xk", c.term("x", strip.k))
+        row: Number = w.bind("total", a.total(strip.sum))
+        if not c.order.mirrored:
+            row = w.bind("row", a.multiply_add(add(row, row), strip.diagonal, x))
+        left = conjugate(x) if c.layout.hermitian else x
+        w.assign(c.totals, a.accumulate(w, c.totals, left, row))
+
+    def epilogue(self, c: Context) -> None:
+        total = convert(c.arithmetic.total(c.totals), c.arithmetic.result)
+        c.w.store("s", expr(0), total)
+
+    def statement(self, c: Context, backward: bool, block: int) -> tuple[str, ...]:
+        way = "descending" if backward else "ascending"
+        left = "conj(x(k))" if c.layout.hermitian else "x(k)"
+        real = ", of which only the real part is computed" if c.layout.hermitian else ""
+        if c.order.mirrored:
+            return (
+                f"The sum of row k starts at 0 and adds A(k,m)*x(m) in {way} order of m; then "
+                f"s, which starts at 0, adds {left}*sum in {way} order of k{real}.",
+            )
+        return (
+            f"Strips k are visited in {way} order, each in {way} order of its index m. The sum of "
+            "a strip starts at 0 and adds A(k,m)*x(m) for its off-diagonal elements; then row is "
+            f"(sum + sum) + A(k,k)*x(k), and s, which starts at 0, adds {left}*row in {way} order "
+            f"of k{real}.",
+        )
+
+    def limit(self, n: int, digits: int, scalars: Mapping[str, int]) -> int:
+        # n^2*M^3 <= 2^digits - 1
+        limit = int(((2**digits - 1) / (n * n)) ** (1 / 3)) + 2
+        while n * n * limit**3 > 2**digits - 1:
+            limit -= 1
+        return limit
+
+    def limit_rule(self, digits: int) -> str:
+        return f"n^2*M^3 <= 2^{digits} - 1"

@@ -1,0 +1,104 @@
+"""In which order: loop orders, blocks of strips, direction and unrolling.
+
+A loop order is which elements a strip visits and what each element is used for. To *gather* is
+to add A(k,m)*x(m) to row k's sum; to *scatter* is to add A(m,k)*x(k) to element m of the
+result. An operation says what it can do with either; it knows nothing of the order.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Iterator
+from dataclasses import dataclass
+
+from demilune.keys import key
+from demilune.layouts import Layout
+
+LARGEST_BLOCK = 16
+LARGEST_UNROLLED = 32
+
+
+@dataclass(frozen=True)
+class LoopOrder:
+    """What a loop order does with the elements of row k.
+
+    ``mirrored`` tells whether the pieces that lie in other strips are visited too, so that
+    each stored off-diagonal element is read twice.
+    """
+
+    name: str
+    mirrored: bool
+    gather: bool
+    scatter: bool
+    meaning: str
+
+
+LOOP_ORDERS: dict[str, LoopOrder] = {
+    one.name: one
+    for one in (
+        LoopOrder(
+            "dot", True, True, False,
+            "each result is gathered by the dot product of a whole row with x",
+        ),
+        LoopOrder(
+            "axpy", True, False, True,
+            "each element of x is scattered by an update with a whole column",
+        ),
+        LoopOrder(
+            "fused", False, True, True,
+            "each stored element is read once and used for both of its places",
+        ),
+    )
+}  # fmt: skip
+
+
+@dataclass(frozen=True)
+class Schedule:
+    """The order in which strips and their elements are visited."""
+
+    loop: str | None = key(None, "loop order", words=tuple(LOOP_ORDERS))
+    block: int = key(
+        1, "strips that are worked on at a time", whole=True, minimum=1, maximum=LARGEST_BLOCK
+    )
+    direction: str = key(
+        "forward", "from the first strip to the last, or back", words=("forward", "backward")
+    )
+    unroll: bool = key(False, "whether a small fixed n is written out without loops", flag=True)
+
+    @property
+    def order(self) -> LoopOrder:
+        assert self.loop is not None, "the operation's default has been filled in"
+        return LOOP_ORDERS[self.loop]
+
+    @property
+    def backward(self) -> bool:
+        return self.direction == "backward"
+
+    def problems(
+        self, layout: Layout, operation: str, allowed: tuple[str, ...], why: str
+    ) -> Iterator[tuple[str, str]]:
+        """Pairs of a key and why its value cannot be, for ``layout`` and the loop orders allowed."""
+        n, tile = layout.n, getattr(layout, "tile", None)
+        if self.loop not in allowed:
+            words = " or ".join(f'"{word}"' for word in allowed)
+            yield (
+                "loop",
+                (f'operation "{operation}" has no loop order "{self.loop}": {why}; use {words}'),
+            )
+        if isinstance(n, int) and self.block > n:
+            yield "block", f"a block of {self.block} strips is more than the matrix has, n = {n}"
+        elif tile is not None and self.block > tile:
+            yield "block", f"a block of {self.block} strips is more than a tile has, {tile}"
+        if self.unroll and not (isinstance(n, int) and n <= LARGEST_UNROLLED):
+            found = f"{n}" if isinstance(n, int) else f'"{n}"'
+            yield (
+                "unroll",
+                (f"only a fixed n of at most {LARGEST_UNROLLED} is unrolled, not n = {found}"),
+            )
+        elif self.unroll and not layout.known_shape:
+            yield (
+                "unroll",
+                (
+                    "the bounds of the strips are known only when the routine is called; leave "
+                    "unroll at false"
+                ),
+            )

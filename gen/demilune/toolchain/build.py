@@ -1,0 +1,83 @@
+"""From source files to executables: one at a time, or many on all cores."""
+
+from __future__ import annotations
+
+import os
+from collections.abc import Callable, Iterable, Mapping
+from concurrent.futures import ThreadPoolExecutor
+from dataclasses import dataclass, field
+from pathlib import Path
+
+from demilune.errors import DemiluneError, MissingError
+from demilune.plan.build import Plan
+from demilune.toolchain import cache
+from demilune.toolchain.compilers import Compiler, find_compiler, has_fma, library_flags
+from demilune.toolchain.executables import CExecutable, Executable, PythonExecutable
+
+
+def executable_of(plan: Plan, files: Mapping[str, str]) -> Executable:
+    """The routine of ``plan`` from the files that hold it."""
+    if plan.spec.language == "python":
+        return PythonExecutable(plan, files[f"{plan.spec.file}.py"])
+    return CExecutable(plan, compiled(find_compiler(), [plan], files))
+
+
+def flags_for(plans: list[Plan]) -> tuple[str, ...]:
+    """The compiler flags for a file that holds these routines; all have one environment."""
+    fma = any(plan.spec.arithmetic.fma for plan in plans)
+    environment = plans[0].spec.target.environment
+    if fma and environment == "freestanding" and not has_fma():
+        raise MissingError(
+            "this machine has no fused multiply-add instruction, which a freestanding routine "
+            'with fma = true needs; use environment = "hosted" or another machine'
+        )
+    return library_flags(fma, environment)
+
+
+def compiled(compiler: Compiler, plans: list[Plan], files: Mapping[str, str]) -> Path:
+    """The library of some files, compiled or from the cache."""
+    return cache.library(compiler, flags_for(plans), files)
+
+
+@dataclass
+class Unit:
+    """A file with its routines, and what became of it."""
+
+    file: str
+    language: str
+    plans: list[Plan]
+    files: dict[str, str]
+    executables: list[Executable] = field(default_factory=list)
+    error: DemiluneError | None = None
+
+
+def build_units(
+    units: Iterable[Unit], done: Callable[[Unit], None] = lambda unit: None
+) -> list[Unit]:
+    """Makes the executables of all units; what fails is kept in ``error``.
+
+    C units are compiled on all cores; ``done`` is told of each as it is ready.
+    """
+    units = list(units)
+    try:
+        compiler: Compiler | MissingError = find_compiler()
+    except MissingError as error:
+        compiler = error
+
+    def make(unit: Unit) -> None:
+        try:
+            if unit.language == "python":
+                source = unit.files[f"{unit.file}.py"]
+                unit.executables = [PythonExecutable(plan, source) for plan in unit.plans]
+            elif isinstance(compiler, MissingError):
+                unit.error = compiler
+            else:
+                library = compiled(compiler, unit.plans, unit.files)
+                unit.executables = [CExecutable(plan, library) for plan in unit.plans]
+        except DemiluneError as error:
+            unit.error = error
+
+    with ThreadPoolExecutor(os.cpu_count() or 1) as pool:
+        for unit, _ in zip(units, pool.map(make, units), strict=True):
+            done(unit)
+    return units

@@ -1,0 +1,3 @@
+"""The version of Demilune, as it stands in emitted files."""
+
+__version__ = "0.1.0"

@@ -1,0 +1,1 @@
+"""The text of the languages that routines are written in."""
