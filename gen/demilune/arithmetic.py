@@ -235,7 +235,8 @@ class Arithmetic:
             product = self.multiply(left, right)
             return add(total, product[: len(total)])
         result = []
-        for part, value in enumerate(total):
+        for part, start in enumerate(total):
+            value: Value = start
             for sign, p, q in real_terms(left, right, part):
                 value = Fma(_signed(sign, p), q, value, p.type)
             result.append(value)
@@ -312,8 +313,8 @@ class Arithmetic:
         product = Declare("p", binary("*", a, b), False)
         meaning = "p + e is exactly a * b, and p is a * b rounded"
         if self.fma:
-            error = Fma(a, b, Negate(p, self.sums), self.sums)
-            body = (product, Declare("e", error, False))
+            fused = Fma(a, b, Negate(p, self.sums), self.sums)
+            body = (product, Declare("e", fused, False))
             return Function(
                 f"two_product_fma_{self.sums}",
                 f"{meaning} (with a fused multiply-add).",

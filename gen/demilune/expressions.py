@@ -38,7 +38,7 @@ def templates() -> jinja2.Environment:
     env = jinja2.Environment(
         loader=jinja2.FileSystemLoader(TEMPLATES),
         undefined=jinja2.StrictUndefined,
-        autoescape=False,  # sources are no markup
+        autoescape=False,  # noqa: S701 - sources are no markup
     )
     env.filters["zip"] = lambda first, second: list(zip(first, second, strict=True))
     return env
@@ -135,9 +135,9 @@ class ExpressionWriter:
             }
             rest = Expr.of({m: f for m, f in value.terms if common not in m})
             negative = all(factor < 0 for factor in inside.values())
-            factor = Expr.of(inside) if not negative else -Expr.of(inside)
+            cofactor = Expr.of(inside) if not negative else -Expr.of(inside)
             taken = _grouped(self._atom(common), "+-*/")
-            term = f"{_grouped(self.integer(factor), '+-')} * {taken}"
+            term = f"{_grouped(self.integer(cofactor), '+-')} * {taken}"
             terms = [(negative, term), *(self._terms(rest) if rest.terms else [])]
             return sorted(terms, key=lambda term: term[0])
         terms = []

@@ -85,7 +85,7 @@ def _write_beside(path: Path, text: str) -> Path:
             os.fsync(file.fileno())
         umask = os.umask(0)
         os.umask(umask)
-        os.chmod(name, 0o666 & ~umask)
+        Path(name).chmod(0o666 & ~umask)
     except BaseException:
         Path(name).unlink(missing_ok=True)
         raise

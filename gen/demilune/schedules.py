@@ -76,7 +76,7 @@ class Schedule:
     def problems(
         self, layout: Layout, operation: str, allowed: tuple[str, ...], why: str
     ) -> Iterator[tuple[str, str]]:
-        """Pairs of a key and why its value cannot be, for ``layout`` and the loop orders allowed."""
+        """Pairs of a key and why its value cannot be, given the loop orders ``allowed``."""
         n, tile = layout.n, getattr(layout, "tile", None)
         if self.loop not in allowed:
             words = " or ".join(f'"{word}"' for word in allowed)

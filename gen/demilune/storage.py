@@ -49,8 +49,8 @@ def empty_half(layout: Layout, sizes: dict[str, Any], dtype: npt.DTypeLike, fill
 
 def flat(layout: Layout, half: Array) -> Array:
     """The array's elements in the order in which they are stored, as a view."""
-    order = "F" if half.ndim == 2 and layout.order == "column-major" else "C"
-    view = half.reshape(-1, order=order)
+    columns = half.ndim == 2 and layout.order == "column-major"
+    view: Array = (half.T if columns else half).reshape(-1)
     if not np.shares_memory(view, half) and half.size:
         raise InputError("the array is not contiguous in the layout's order")
     return view

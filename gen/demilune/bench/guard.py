@@ -101,9 +101,11 @@ def unused_touched(executable: Executable, problems: list[Problem]) -> Iterator[
     for problem in problems:
         arrays = {}
         for name, one in problem.plan.arrays.items():
-            scratch = problem.scratch[name].any(axis=1)
-            readable = problem.readable[name].any(axis=1)
-            writable = problem.writable[name].any(axis=1) | scratch
+            scratch, readable, writable = (
+                np.asarray(masks[name].any(axis=1))
+                for masks in (problem.scratch, problem.readable, problem.writable)
+            )
+            writable = writable | scratch
             if _never_read(problem, name):
                 readable = readable & False
             arrays[name] = Watched(

@@ -26,7 +26,7 @@ from demilune.bench.problem import (
     uniform,
 )
 from demilune.bench.reference import errors, numpy_product
-from demilune.bench.run import differences, foretell, run_case
+from demilune.bench.run import arguments_of, differences, foretell, run_case
 from demilune.keys import RUNTIME
 from demilune.plan.build import Plan
 from demilune.toolchain.executables import CExecutable, Executable
@@ -165,8 +165,8 @@ class _Bench:
         digits = REAL_DIGITS[operation.narrowest(arithmetic)]
         if arithmetic.type.complex:  # a product of complex numbers has two terms
             n, digits = 2 * n, digits - (2 if operation.name != "matvec" else 1)
-        largest = operation.limit(max(n, 1), digits, scalars)
-        return min(largest, 2 ** REAL_DIGITS[arithmetic.real] - 1)
+        largest: int = operation.limit(max(n, 1), digits, scalars)
+        return min(largest, int(2 ** REAL_DIGITS[arithmetic.real] - 1))
 
     # --- 2 ---------------------------------------------------------------------------------
 
@@ -309,8 +309,6 @@ class _Bench:
 
 def call_flat(executable: Executable, problem: Problem, arrays: dict[str, Any]) -> str | None:
     """Calls a kernel with buffers of parts, in place."""
-    from demilune.bench.run import arguments_of
-
     flat = {}
     for name, one in problem.plan.arrays.items():
         array = arrays[name].reshape(-1)

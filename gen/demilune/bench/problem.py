@@ -25,14 +25,14 @@ Draw = Callable[[np.random.Generator, tuple[int, ...]], Lanes]
 """Draws real numbers of some shape."""
 
 PAD = 8
-POISON = {
+POISON: dict[str, Any] = {
     "float32": np.uint32(0x7FA5A5A5),
     "float64": np.uint64(0x7FF5A5A5A5A5A5A5),
     "int16": np.uint16(0x5A5A),
     "int32": np.uint32(0x5A5A5A5A),
     "int64": np.uint64(0x5A5A5A5A5A5A5A5A),
 }
-BITS = {name: value.dtype for name, value in POISON.items()}
+BITS: dict[str, np.dtype[Any]] = {name: value.dtype for name, value in POISON.items()}
 
 
 @dataclass(frozen=True)
@@ -217,16 +217,20 @@ def lattice(largest: int, exponent: int = 0) -> Draw:
 
 def uniform(generator: np.random.Generator, shape: tuple[int, ...]) -> Lanes:
     """Numbers of magnitude 1/8 to 1: no error bound is disturbed by underflow."""
-    return generator.uniform(0.125, 1, size=shape) * generator.choice([-1.0, 1.0], size=shape)
+    signs = generator.choice([-1.0, 1.0], size=shape)
+    return np.asarray(generator.uniform(0.125, 1, size=shape) * signs)
 
 
 def all_magnitudes(real: str) -> Draw:
     """Ordinary numbers, every exponent, and specials, lane by lane in turn."""
     info = np.finfo(real)
     specials = np.array(
-        [0.0, -0.0, np.inf, -np.inf, np.nan, info.max, -info.max, info.tiny, info.smallest_subnormal,
-         -info.smallest_subnormal, 1.0, -1.0, 1.0 + float(info.eps)]
-    )  # fmt: skip
+        [
+            *(0.0, -0.0, np.inf, -np.inf, np.nan, 1.0, -1.0, 1.0 + float(info.eps)),
+            *(info.max, -info.max, info.tiny),
+            *(info.smallest_subnormal, -info.smallest_subnormal),
+        ]
+    )
 
     def draw(generator: np.random.Generator, shape: tuple[int, ...]) -> Lanes:
         values = generator.uniform(-1, 1, size=shape)

@@ -52,11 +52,11 @@ def run_case(executable: Executable, problem: Problem, lane: int) -> dict[str, L
 def foretell(evaluator: Evaluator, problem: Problem) -> dict[str, Lanes]:
     """The buffers after the call, for all cases, as the plan has it."""
     after = {name: buffer.copy() for name, buffer in problem.buffers.items()}
-    scalars = {}
+    scalars: dict[str, tuple[float | int, ...]] = {}
     for one in problem.plan.parameters:
         if one.kind == "scalar":
             value = problem.setting.scalars[one.name]
-            scalars[one.name] = (value.real, value.imag) if one.complex else (value,)
+            scalars[one.name] = (value.real, value.imag) if one.complex else (value.real,)
     inside = {name: buffer[PAD:] for name, buffer in after.items()}
     evaluator.run(problem.setting.sizes, scalars, inside)
     return after

@@ -109,7 +109,10 @@ class Band(Layout):
             if self.kd == RUNTIME:
                 yield "ld", 'a fixed leading dimension needs a fixed kd; use ld = "runtime"'
             elif int(self.ld or 0) < int(self.kd) + 1:
-                yield "ld", f"the leading dimension {self.ld} is less than kd + 1 = {self.kd + 1}"
+                yield (
+                    "ld",
+                    f"the leading dimension {self.ld} is less than kd + 1 = {int(self.kd) + 1}",
+                )
 
     def shape(self, env: Environment) -> tuple[int, ...]:
         n, ld = self.size.value(env), self.leading.value(env)

@@ -63,7 +63,8 @@ class RectangularFullPacked(Layout):
 
     def groups(self) -> tuple[Group, ...]:
         cut, n = CUT, self.size
-        large, small = self._large, self._small
+        large: Place = self._large
+        small: Place = self._small
         if self.transposed:  # the runs are the rectangle's rows, so the two indices change places
             large, small = _swapped(large), _swapped(small)
         low = from_to(lambda k: 0, lambda k: cut)

@@ -50,7 +50,7 @@ class Tiled(Layout):
         return b * b * quotient(q, q + 1, divisor=2) + p * b * width
 
     def groups(self) -> tuple[Group, ...]:
-        b, n, tiles, tail = self.tile, self.size, symbol("tiles"), self.tail
+        b, tiles, tail = self.tile, symbol("tiles"), self.tail
         width, start = symbol("width"), symbol("start")  # of the diagonal tile
         height, other = symbol("height"), symbol("other")  # of tile p and of the tile off it
         edge = Q * b + width

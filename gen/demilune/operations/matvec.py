@@ -275,7 +275,8 @@ class MatVec(Operation):
             )
             lines.append(
                 f"At the end of a {'block' if block > 1 else 'strip'} "
-                f"{'alpha times ' if in_place else ''}the sum of the strip is added to that of y(k)."
+                f"{'alpha times ' if in_place else ''}the sum of the strip is added to that of "
+                "y(k)."
             )
         if not in_place:
             lines.append("At the end y(i) is alpha*sum + beta*y(i).")

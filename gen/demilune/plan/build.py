@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Callable
 from dataclasses import dataclass
-from functools import cached_property
+from functools import cached_property, partial
 from typing import TYPE_CHECKING, TypeVar
 
 from demilune.index import Compare, Expr, Extreme, expr, maximum, minimum, quotient, symbol
@@ -91,7 +91,7 @@ class _Walk:
             named[name] = self.w.integer(name, value.substitute(named))
         groups = [group.substitute(named) for group in self.layout.groups()]
         for group in self._turned(groups):
-            self._nest(group.around, lambda by, group=group: self._group(group.substitute(by)))
+            self._nest(group.around, partial(self._group, group))
         self.operation.epilogue(self.c)
 
     def _refuse(self) -> None:
@@ -121,7 +121,8 @@ class _Walk:
 
     # --- strips ----------------------------------------------------------------------------
 
-    def _group(self, group: Group) -> None:
+    def _group(self, group: Group, by: dict[str, Expr]) -> None:
+        group = group.substitute(by)
         w, b, back = self.w, self.block, self.backward
         low, high = group.low, group.high
         if b == 1:
@@ -153,18 +154,15 @@ class _Walk:
                 for strip in strips:
                     operation.diagonal(c, strip, one.place(strip.k))
             else:
-                piece = one
-                self._nest(
-                    piece.around,
-                    lambda by, piece=piece: self._piece(piece.substitute(by), strips),
-                )
+                self._nest(one.around, partial(self._piece, one, strips))
         for strip in strips:
             operation.close(c, strip)
 
     # --- elements --------------------------------------------------------------------------
 
-    def _piece(self, piece: Piece, strips: list[Strip]) -> None:
+    def _piece(self, piece: Piece, strips: list[Strip], by: dict[str, Expr]) -> None:
         """The elements of one piece for some strips: what they share together, the rest apart."""
+        piece = piece.substitute(by)
         w = self.w
         lows = [piece.low(strip.k) for strip in strips]
         highs = [piece.high(strip.k) for strip in strips]
@@ -224,13 +222,9 @@ class _Walk:
             if piece.when is None:
                 self.operation.element(self.c, m, together, piece.own)
                 return
-            for strip, place in together:
-                self.w.when(
-                    piece.when(strip.k, m),
-                    lambda strip=strip, place=place: self.operation.element(
-                        self.c, m, [(strip, place)], piece.own
-                    ),
-                )
+            for strip, at in together:
+                visit = partial(self.operation.element, self.c, m, [(strip, at)], piece.own)
+                self.w.when(piece.when(strip.k, m), visit)
 
         name = "i" if piece.own else "j"
         self.w.loop(name, low, high, one, backward=self.backward)

@@ -9,6 +9,7 @@ from __future__ import annotations
 
 from collections import Counter
 from collections.abc import Mapping
+from contextlib import suppress
 from dataclasses import dataclass, field
 from fractions import Fraction
 from typing import Any
@@ -117,7 +118,7 @@ def _deepest(body: tuple[Statement, ...]) -> int:
     return here + inside
 
 
-class _Done(Exception):
+class _Done(Exception):  # noqa: N818 - no error
     """The routine has ended."""
 
 
@@ -128,10 +129,8 @@ class _Counter:
         self._statements: dict[int, Counts] = {}
 
     def run(self, body: tuple[Statement, ...], env: dict[str, Any], total: Counts) -> None:
-        try:
+        with suppress(_Done):
             self._block(body, env, total)
-        except _Done:
-            pass
 
     def _block(self, body: tuple[Statement, ...], env: dict[str, Any], total: Counts) -> None:
         for one in body:
