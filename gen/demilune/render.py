@@ -43,13 +43,16 @@ WIDTH = 90
 INDENT = "    "
 
 
-def render(plans: Iterable[Plan], file: str, language: str) -> dict[str, str]:
+def render(
+    plans: Iterable[Plan], file: str, language: str, *, contracts: bool = True
+) -> dict[str, str]:
     """The source files, by name, that hold the routines of ``plans``.
 
     ``file`` is the name without ending; all plans must be for this language and environment.
+    Without ``contracts`` the routines are bare: for plans that no specification promises.
     """
     plans = list(plans)
-    return _Renderer(ALL[language], file, plans).files()
+    return _Renderer(ALL[language], file, plans, contracts).files()
 
 
 def prototype(plan: Plan) -> str:
@@ -63,7 +66,10 @@ def pseudo_code(plan: Plan) -> str:
 
 
 class _Renderer(ExpressionWriter):
-    def __init__(self, language: Language, file: str, plans: list[Plan]) -> None:
+    def __init__(
+        self, language: Language, file: str, plans: list[Plan], contracts: bool = True
+    ) -> None:
+        self.contracts = contracts
         super().__init__(language, plans[0].spec.target.environment == "freestanding")
         self.file, self.plans = file, plans
 
@@ -119,7 +125,9 @@ class _Renderer(ExpressionWriter):
             "title": title(plan),
             "parameters": [self._parameter(one) for one in plan.parameters],
             "reports": _reports(plan),
-            "contract": contract(plan, self.language, _reports(plan)),
+            "contract": (
+                contract(plan, self.language, _reports(plan)) if self.contracts else [title(plan)]
+            ),
             "body": body,
         }
         routine["prototype"] = self.routine_prototype(plan)

@@ -117,6 +117,8 @@ def unused_touched(executable: Executable, problems: list[Problem]) -> Iterator[
             executable(arguments_of(problem, arrays))
         except IndexError as error:
             yield f"{problem.setting}: {error}, which may not be touched"
+        except Exception as error:
+            yield f"{problem.setting}: raised {type(error).__name__}: {error}"
 
 
 def _never_read(problem: Problem, name: str) -> bool:

@@ -10,11 +10,13 @@ from typing import Any
 import numpy as np
 
 from demilune.arithmetic import REAL_DIGITS
-from demilune.bench import guard
+from demilune.bench import guard, isolation
 from demilune.bench.evaluator import Evaluator
 from demilune.bench.problem import (
+    KINDS,
     PAD,
     Draw,
+    Lanes,
     Problem,
     Setting,
     all_magnitudes,
@@ -34,6 +36,8 @@ from demilune.toolchain.executables import CExecutable, Executable
 LEVELS = ("exact", "faithful", "bound", "untouched", "calling")
 EXACT_SCALARS = (0.0, 1.0, -1.0, 2.0, -3.0)
 GENERAL_SCALARS = (1.0, -1.0, 2.5, 0.3, -0.7)
+SECONDS = 300
+"""How long all levels of one kernel may take before it is taken to hang."""
 FEW = 3
 """Failures of one level that are told; the rest is counted."""
 
@@ -93,18 +97,43 @@ class Verdict:
 def verify(plan: Plan, executable: Executable, seed: int = 1) -> Verdict:
     """Runs all levels on a kernel; the same seed gives the same inputs."""
     start = time.perf_counter()
+    if isinstance(executable, CExecutable) and isolation.AVAILABLE:
+        levels = _isolated(plan, executable, seed)
+    else:
+        levels = list(_levels(plan, executable, seed))
+    verdict = Verdict(plan.spec.name, plan.spec.language, seed, levels)
+    verdict.seconds = time.perf_counter() - start
+    return verdict
+
+
+def _isolated(plan: Plan, executable: Executable, seed: int) -> list[Level]:
+    """All levels in a child process, so that a kernel that crashes takes nothing with it."""
+    levels: list[Level] = []
+    try:
+        for level in isolation.results(_levels(plan, executable, seed), SECONDS):
+            levels.append(level)
+    except Exception as ended:
+        broken = Level(LEVELS[len(levels)])
+        broken.fail(
+            f"the kernel {ended}"
+            if isinstance(ended, isolation.Ended)
+            else (f"the bench broke, as it may where memory is overwritten: {ended!r}")
+        )
+        levels.append(broken)
+        for name in LEVELS[len(levels) :]:
+            levels.append(Level(name, skipped="the kernel ended the process before"))
+    return levels
+
+
+def _levels(plan: Plan, executable: Executable, seed: int) -> Iterator[Level]:
     bench = _Bench(plan, executable, seed)
     checks: tuple[Callable[[Level], None], ...] = (
         bench.exact, bench.faithful, bench.bound, bench.untouched, bench.calling,
     )  # fmt: skip
-    levels = []
     for name, check in zip(LEVELS, checks, strict=True):
         level = Level(name)
         check(level)
-        levels.append(level)
-    verdict = Verdict(plan.spec.name, plan.spec.language, seed, levels)
-    verdict.seconds = time.perf_counter() - start
-    return verdict
+        yield level
 
 
 class _Bench:
@@ -131,10 +160,20 @@ class _Bench:
 
     def _compare(self, level: Level, problem: Problem, expected: Any, by_value: bool) -> None:
         for lane in range(problem.lanes):
-            found = run_case(self.executable, problem, lane)
-            level.cases += 1
+            found = self._run(level, problem, lane)
+            if found is None:
+                continue
             for message in differences(problem, expected, found, lane, by_value=by_value):
                 level.fail(message)
+
+    def _run(self, level: Level, problem: Problem, lane: int) -> dict[str, Lanes] | None:
+        """The buffers after one case, or None if the kernel raised an exception."""
+        level.cases += 1
+        try:
+            return run_case(self.executable, problem, lane)
+        except Exception as error:
+            level.fail(f"{problem.setting}: raised {type(error).__name__}: {error}")
+            return None
 
     # --- 1 ---------------------------------------------------------------------------------
 
@@ -181,7 +220,7 @@ class _Bench:
             scalars = {k: max(1, int(abs(v.real))) for k, v in setting.scalars.items()}
             return integers(self._largest(setting.n, scalars))
 
-        lanes = 6 if not self.large else 3
+        lanes = KINDS if not self.large else 3
         scalars = EXACT_SCALARS if integer else GENERAL_SCALARS
         for problem in self._problems("faithful", draw, scalars, lanes):
             self._compare(level, problem, foretell(self.evaluator, problem), by_value=False)
@@ -199,8 +238,9 @@ class _Bench:
             return
         worst, ulps = 0.0, 0.0
         for problem in self._problems("bound", lambda _: uniform, GENERAL_SCALARS, 1, sizes):
-            found = run_case(self.executable, problem, 0)
-            level.cases += 1
+            found = self._run(level, problem, 0)
+            if found is None:
+                continue
             ratio, distance = errors(problem, found, 0)
             worst, ulps = max(worst, ratio), max(ulps, distance)
             if not ratio <= 1:
@@ -299,7 +339,11 @@ class _Bench:
             key: np.ascontiguousarray(buffer[:, :, 0]) for key, buffer in problem.buffers.items()
         }
         level.cases += 1
-        refused = call_flat(self.executable, problem, arrays)
+        try:
+            refused = call_flat(self.executable, problem, arrays)
+        except Exception as error:
+            level.fail(f"{problem.setting}: {name}: raised {type(error).__name__}: {error}")
+            return
         if refused != name:
             level.fail(f"{problem.setting}: {name} is not refused (refused: {refused})")
         for key, buffer in problem.buffers.items():

@@ -21,8 +21,8 @@ from demilune.plan.tree import Parameter
 from demilune.storage import indices
 
 Lanes = npt.NDArray[Any]
-Draw = Callable[[np.random.Generator, tuple[int, ...]], Lanes]
-"""Draws real numbers of some shape."""
+Draw = Callable[[np.random.Generator, tuple[int, ...], str], Lanes]
+"""Draws real numbers of some shape for ``A``, ``x`` or ``y``; lanes are the last axis."""
 
 PAD = 8
 POISON: dict[str, Any] = {
@@ -102,7 +102,7 @@ def make_problem(
     """Draws a matrix and vectors, and lays them out in poisoned buffers."""
     n, parts = setting.n, plan.spec.arithmetic.type.parts
     real, result = plan.spec.arithmetic.real, plan.spec.arithmetic.result
-    drawn = draw(generator, (n, n, parts, lanes)).astype(real)
+    drawn = draw(generator, (n, n, parts, lanes), "A").astype(real)
     rows, columns = np.tril_indices(n, -1)
     drawn[rows, columns] = drawn[columns, rows]
     if plan.spec.layout.hermitian:
@@ -114,8 +114,8 @@ def make_problem(
         mask[i, j] = mask[j, i] = True
     drawn[~mask] = 0
     vectors = {
-        "x": draw(generator, (n, parts, lanes)).astype(real),
-        "y": draw(generator, (n, parts, lanes)).astype(result),
+        "x": draw(generator, (n, parts, lanes), "x").astype(real),
+        "y": draw(generator, (n, parts, lanes), "y").astype(result),
     }
     problem = Problem(plan, setting, drawn, vectors)
     for one in plan.arrays.values():
@@ -199,7 +199,10 @@ def sizes_to_try(plan: Plan) -> list[int]:
     around = {1, 2, 3, 5, 8, block, block + 1, 2 * block + 1}
     if tile and tile <= 16:
         around |= {tile, tile + 1, 2 * tile + 1}
-    return sorted(n for n in around if 0 < n <= 33)
+    around = {n for n in around if 0 < n <= 33}
+    # One that is larger than 16 and leaves something over in every block and tile.
+    ragged = (n for n in range(17, 40) if all(n % size for size in (block, tile) if size > 1))
+    return sorted(around | {next(ragged, 17)})
 
 
 # --- values ------------------------------------------------------------------------------------
@@ -208,17 +211,20 @@ def sizes_to_try(plan: Plan) -> list[int]:
 def lattice(largest: int, exponent: int = 0) -> Draw:
     """Whole numbers from -largest to largest, zero left out, times a power of two."""
 
-    def draw(generator: np.random.Generator, shape: tuple[int, ...]) -> Lanes:
+    def draw(generator: np.random.Generator, shape: tuple[int, ...], name: str) -> Lanes:
         size = generator.integers(1, largest, size=shape, endpoint=True)
         return np.asarray(size * generator.choice([-1, 1], size=shape) * 2.0**exponent)
 
     return draw
 
 
-def uniform(generator: np.random.Generator, shape: tuple[int, ...]) -> Lanes:
+def uniform(generator: np.random.Generator, shape: tuple[int, ...], name: str) -> Lanes:
     """Numbers of magnitude 1/8 to 1: no error bound is disturbed by underflow."""
     signs = generator.choice([-1.0, 1.0], size=shape)
     return np.asarray(generator.uniform(0.125, 1, size=shape) * signs)
+
+
+KINDS = 7
 
 
 def all_magnitudes(real: str) -> Draw:
@@ -232,7 +238,7 @@ def all_magnitudes(real: str) -> Draw:
         ]
     )
 
-    def draw(generator: np.random.Generator, shape: tuple[int, ...]) -> Lanes:
+    def draw(generator: np.random.Generator, shape: tuple[int, ...], name: str) -> Lanes:
         values = generator.uniform(-1, 1, size=shape)
         exponents = generator.integers(info.minexp - info.nmant, info.maxexp, size=shape)
         chosen = generator.choice(specials, size=shape)
@@ -240,7 +246,7 @@ def all_magnitudes(real: str) -> Draw:
         signs = generator.choice([-1.0, 1.0], size=shape)
         picked = generator.random(size=shape)
         for lane in range(shape[-1]):
-            kind, at = lane % 6, (..., lane)
+            kind, at = lane % KINDS, (..., lane)
             if kind == 1:  # half the range of exponents: products do not overflow
                 values[at] = np.ldexp(values[at], exponents[at] // 2)
             elif kind == 2:  # every exponent
@@ -253,15 +259,36 @@ def all_magnitudes(real: str) -> Draw:
             elif kind == 5:  # around the smallest numbers, and signed zeros
                 tiny = np.ldexp(values[at], info.minexp // 2 - 8)
                 values[at] = np.where(picked[at] < 0.3, 0.0 * signs[at], tiny)
+            elif kind == 6:
+                values[at] = _cancelling(values[at], name, generator, float(info.eps))
         return values
 
     return draw
 
 
+def _cancelling(values: Lanes, name: str, generator: np.random.Generator, eps: float) -> Lanes:
+    """Rows whose sums cancel to a few units of the last place, so that every order shows.
+
+    The second half of the columns repeats the first, and the second half of x is nearly
+    opposite to the first.
+    """
+    size = values.shape[0]
+    half = max(1, size // 2)
+    first = np.arange(size) % half
+    if name == "A":
+        return np.asarray(values[np.ix_(first, first)])
+    if name == "y":
+        return values * eps
+    x = values[first]
+    x[half:] *= -(1 + eps * generator.integers(1, 9, size=x[half:].shape))
+    x[2 * half :] *= eps
+    return np.asarray(x)
+
+
 def integers(largest: int) -> Draw:
     """Whole numbers of at most ``largest`` in magnitude, the ends and zero often."""
 
-    def draw(generator: np.random.Generator, shape: tuple[int, ...]) -> Lanes:
+    def draw(generator: np.random.Generator, shape: tuple[int, ...], name: str) -> Lanes:
         values = generator.integers(-largest, largest, size=shape, endpoint=True)
         ends = generator.choice([-largest, 0, largest], size=shape)
         return np.where(generator.random(size=shape) < 0.3, ends, values)

@@ -92,6 +92,8 @@ def errors(problem: Problem, found: dict[str, Lanes], lane: int) -> tuple[float,
     for result in _results(problem, found, lane):
         bound = _bound(problem, result)
         for got, exact in zip(result.found, result.exact, strict=False):
+            if not np.isfinite(got):
+                return float("inf"), float("inf")
             error = abs(Fraction(float(got)) - exact)
             if error:
                 worst = max(worst, float(error / bound) if bound else float("inf"))

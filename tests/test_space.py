@@ -1,0 +1,42 @@
+"""Hypothesis over the whole space of specifications, sizes and data."""
+
+from __future__ import annotations
+
+import space
+from hypothesis import given
+from hypothesis import strategies as st
+
+from demilune import SpecError, make_spec
+from demilune.spec import known_keys
+
+BATCH = 8
+
+
+@st.composite
+def specifications(draw):
+    return space.draw(lambda key, values: draw(st.sampled_from(list(values))))
+
+
+@given(st.lists(specifications(), min_size=BATCH, max_size=BATCH))
+def test_every_specification_is_verified(batch):
+    """25 examples of 8 kernels in the normal profile, 2,000 of 8 in the long one."""
+    assert space.verify_all(batch) == []
+
+
+@given(specifications(), st.data())
+def test_a_change_of_one_value_is_accepted_or_refused_with_a_reason(values, data):
+    """Nothing in between: no other error, and what is refused names a key."""
+    known = known_keys(values["operation"], values["layout"])
+    key = data.draw(st.sampled_from(sorted(known)))
+    one = known[key]
+    options = [*one.words, *((True, False) if one.flag else ()), *((0.5, 3) if one.number else ())]
+    options += [data.draw(st.integers(-3, 40))] if one.whole else []
+    options += ["shared"] if one.text else []
+    changed = {**values, key: data.draw(st.sampled_from(options))}
+    try:
+        spec = make_spec("changed", **changed)
+    except SpecError as error:
+        assert all(problem.key for problem in error.problems)
+        assert all(len(problem.message) > 10 for problem in error.problems)
+    else:
+        assert spec.values[key] == changed[key]
