@@ -57,8 +57,8 @@ def test_fused_multiply_add_of_binary64_is_rounded_once(a, b, c):
 def test_fused_multiply_add_where_two_roundings_go_wrong():
     # The product is just above a tie between two binary32 numbers: rounding to binary64 first
     # loses that (a known trap of software that fuses in the wider type).
-    a, c = np.float32(1 + 2**-12), np.float32(2**-80)
-    assert fused(a, a, c).view(np.uint32) == 0x3F801001
+    a, c = np.float32([1 + 2**-12]), np.float32([2**-80])
+    assert fused(a, a, c).view(np.uint32)[0] == 0x3F801001
 
 
 # --- planted faults ------------------------------------------------------------------------------
@@ -77,7 +77,7 @@ def faulty_specs():
         (layout, operation, loop)
         for layout in LAYOUTS
         for operation, made in OPERATIONS.items()
-        for loop in made.loops
+        for loop in made.loops()
     ]
     for place, (layout, operation, loop) in enumerate(kinds):
         values = dict(VARIANTS[place % len(VARIANTS)])

@@ -10,17 +10,16 @@ import inspect
 import math
 import platform
 import re
-import subprocess
 import traceback
 from fractions import Fraction
-from pathlib import Path
+from functools import cache
 from typing import Any
 
 import numpy as np
 import pytest
 from hypothesis import example, given, settings
 from hypothesis import strategies as st
-from test_counts import extent, settings_of
+from test_counts import build, extent, run, settings_of
 from test_golden import groups, plans, sources, write
 from tools import need
 
@@ -39,27 +38,18 @@ CXX = ["-x", "c++", "-std=c++17", *(flag for flag in WARNINGS if "prototypes" no
 DIALECTS = {"gcc": C99, "clang": C99, "g++": CXX, "clang++": CXX}
 
 
-def run(folder: Path, *command: str) -> subprocess.CompletedProcess[str]:
-    return subprocess.run(command, cwd=folder, capture_output=True, text=True, check=False)
-
-
-def compile(folder: Path, compiler: str, *arguments: str) -> None:
-    done = run(folder, need(compiler), *arguments)
-    assert done.returncode == 0, done.stderr[:3000]
-
-
 # --- warnings -----------------------------------------------------------------------------------
 
 
 @pytest.mark.parametrize("compiler", DIALECTS)
 def test_no_warning(compiler, tmp_path):
     names = write(tmp_path, sources())
-    compile(tmp_path, compiler, "-fsyntax-only", *DIALECTS[compiler], *FMA, *names)
+    build(tmp_path, compiler, "-fsyntax-only", *DIALECTS[compiler], *FMA, *names)
 
 
 def test_no_warning_of_the_optimiser(tmp_path):
     names = write(tmp_path, groups())
-    compile(tmp_path, "gcc", "-O1", *C99, *FMA, "-S", *names)
+    build(tmp_path, "gcc", "-O1", *C99, *FMA, "-S", *names)
 
 
 @pytest.mark.parametrize("compiler", DIALECTS)
@@ -159,14 +149,14 @@ def test_flags_are_refused_or_change_no_bit(compiler, flags, tmp_path):
     if compiler == "clang" and "contract" in flags:
         pytest.skip("clang 14 heeds no pragma once it is told to fuse, and tells nobody")
     write(tmp_path, plain_files(PLAIN) | {"main.c": SUM})
-    compile(tmp_path, compiler, "-O0", "plain.c", "main.c", "-o", "main")
+    build(tmp_path, compiler, "-O0", "plain.c", "main.c", "-o", "main")
     expected = run(tmp_path, "./main").stdout
     assert expected.split()[-1] == "0x0p+0"
     done = run(tmp_path, need(compiler), "-O3", *flags.split(), "-c", "plain.c")
     if done.returncode:
         assert refused(done.stderr), done.stderr
     else:
-        compile(tmp_path, compiler, "plain.o", "main.c", "-o", "main")
+        build(tmp_path, compiler, "plain.o", "main.c", "-o", "main")
         assert run(tmp_path, "./main").stdout == expected
 
 
@@ -179,7 +169,7 @@ def test_freestanding_fma_needs_the_instruction(compiler, dtype, tmp_path):
     done = run(tmp_path, need(compiler), "-ffreestanding", "-c", "plain.c")
     assert done.returncode != 0
     assert "fused multiply-add" in done.stderr
-    compile(tmp_path, compiler, "-ffreestanding", "-mfma", "-c", "plain.c")
+    build(tmp_path, compiler, "-ffreestanding", "-mfma", "-c", "plain.c")
 
 
 @pytest.mark.skipif(not X86, reason="looks for an instruction of x86")
@@ -198,7 +188,7 @@ def test_sums_and_products_are_fused_only_where_it_is_asked(compiler, mode, kern
     for fma in (False, True):
         write(tmp_path, plain_files(kernels, fma=fma))
         flags = [*mode.split(), "-O3", "-march=haswell", "-S", "plain.c", "-o", "plain.s"]
-        compile(tmp_path, compiler, *flags)
+        build(tmp_path, compiler, *flags)
         found[fma] = re.findall(r"\bvfn?m(?:add|sub)\w+", (tmp_path / "plain.s").read_text())
     assert not found[False]
     assert len(found[True]) >= len(kernels)
@@ -234,14 +224,14 @@ def test_two_routines_in_one_file_called_from_cxx(c, cxx, tmp_path):
     files = pair("c")
     assert files["pair.c"].count("static void two_sum") == 1
     write(tmp_path, files | {"user.cpp": USER})
-    compile(tmp_path, c, *C99, "-c", "pair.c")
-    compile(tmp_path, cxx, "-std=c++17", "user.cpp", "pair.o", "-o", "user")
+    build(tmp_path, c, *C99, "-c", "pair.c")
+    build(tmp_path, cxx, "-std=c++17", "user.cpp", "pair.o", "-o", "user")
     done = run(tmp_path, "./user")
     assert (done.returncode, done.stdout) == (0, "120 310 32200")
-    # Linking is what the header's extern "C" is for: without it there is no such symbol.
-    plain = files["pair.h"].replace('extern "C" {', "").replace("}\n#endif", "#endif")
-    (tmp_path / "pair.h").write_text(plain)
-    assert run(tmp_path, cxx, "-std=c++17", "user.cpp", "pair.o", "-o", "user").returncode != 0
+    # Without the header's extern "C" the same names cannot be linked.
+    (tmp_path / "pair.h").write_text(files["pair.h"].replace("__cplusplus", "NEVER"))
+    done = run(tmp_path, cxx, "-std=c++17", "user.cpp", "pair.o", "-o", "user")
+    assert "undefined reference" in done.stderr
 
 
 def test_two_routines_in_one_python_file():
@@ -392,6 +382,11 @@ def ties(width: int) -> st.SearchStrategy[tuple[float, float, float]]:
     )  # fmt: skip
 
 
+@cache
+def c_library() -> ctypes.CDLL:
+    return ctypes.CDLL(ctypes.util.find_library("m"))
+
+
 def checked_fma(made: Any, width: int, a: float, b: float, c: float) -> None:
     name, kind = C_NAMES[f"float{width}"]
     found = made(a, b, c)
@@ -403,9 +398,8 @@ def checked_fma(made: Any, width: int, a: float, b: float, c: float) -> None:
             product = math.copysign(1, a) * math.copysign(1, b)
             minus = c == 0 and a * b == 0 and product < 0 and math.copysign(1, c) < 0
             assert same(found, -0.0 if minus else 0.0)
-    path = ctypes.util.find_library("m")
-    if path and platform.libc_ver()[0] == "glibc":  # whose fma and fmaf round once
-        function = getattr(ctypes.CDLL(path), name)
+    if platform.libc_ver()[0] == "glibc":  # whose fma and fmaf round once
+        function = getattr(c_library(), name)
         function.restype, function.argtypes = kind, [kind] * 3
         assert same(found, function(a, b, c))
 

@@ -32,85 +32,49 @@ def layout_of(name, **values) -> Layout:
 
 # LAPACK Users' Guide, 3rd ed. (SIAM, 1999), section "Matrix Storage Schemes": packed storage of
 # a matrix with n = 4 and band storage with n = 5, kd = 2 (from memory). Element a_ij is written
-# ij, counted from 1; * is a place that is never touched.
+# ij, counted from 1; * is a place that is never touched. Left upper, right lower.
 
-PACKED = {
-    "upper": "11 12 22 13 23 33 14 24 34 44",
-    "lower": "11 21 31 41 22 32 42 33 43 44",
-}
+PACKED = "11 12 22 13 23 33 14 24 34 44    11 21 31 41 22 32 42 33 43 44"
 
-BAND = {
-    "upper": """
-         *  * 13 24 35
-         * 12 23 34 45
-        11 22 33 44 55
-    """,
-    "lower": """
-        11 22 33 44 55
-        21 32 43 54  *
-        31 42 53  *  *
-    """,
-}
+BAND = """
+     *  * 13 24 35    11 22 33 44 55
+     * 12 23 34 45    21 32 43 54  *
+    11 22 33 44 55    31 42 53  *  *
+"""
 
 # LAPACK's documentation of the RFP format (the comments of dtrttf.f), n = 6 and n = 5; the same
 # as in Gustavson, Wasniewski, Dongarra, Langou, ACM TOMS 37(2), 2010 (from memory). Counted from
-# 0; the rectangle is stored column by column.
+# 0; the rectangle is stored column by column. Left upper, right lower, as there.
 
 RFP = {
-    ("upper", 6): """
-        03 04 05
-        13 14 15
-        23 24 25
-        33 34 35
-        00 44 45
-        01 11 55
-        02 12 22
+    6: """
+        03 04 05    33 43 53
+        13 14 15    00 44 54
+        23 24 25    10 11 55
+        33 34 35    20 21 22
+        00 44 45    30 31 32
+        01 11 55    40 41 42
+        02 12 22    50 51 52
     """,
-    ("lower", 6): """
-        33 43 53
-        00 44 54
-        10 11 55
-        20 21 22
-        30 31 32
-        40 41 42
-        50 51 52
-    """,
-    ("upper", 5): """
-        02 03 04
-        12 13 14
-        22 23 24
-        00 33 34
-        01 11 44
-    """,
-    ("lower", 5): """
-        00 33 43
-        10 11 44
-        20 21 22
-        30 31 32
-        40 41 42
+    5: """
+        02 03 04    00 33 43
+        12 13 14    10 11 44
+        22 23 24    20 21 22
+        00 33 34    30 31 32
+        01 11 44    40 41 42
     """,
 }
 
 RFP_TRANSPOSED = {
-    ("upper", 6): """
-        03 13 23 33 00 01 02
-        04 14 24 34 44 11 12
-        05 15 25 35 45 55 22
+    6: """
+        03 13 23 33 00 01 02    33 00 10 20 30 40 50
+        04 14 24 34 44 11 12    43 44 11 21 31 41 51
+        05 15 25 35 45 55 22    53 54 55 22 32 42 52
     """,
-    ("lower", 6): """
-        33 00 10 20 30 40 50
-        43 44 11 21 31 41 51
-        53 54 55 22 32 42 52
-    """,
-    ("upper", 5): """
-        02 12 22 00 01
-        03 13 23 33 11
-        04 14 24 34 44
-    """,
-    ("lower", 5): """
-        00 10 20 30 40
-        33 11 21 31 41
-        43 44 22 32 42
+    5: """
+        02 12 22 00 01    00 10 20 30 40
+        03 13 23 33 11    33 11 21 31 41
+        04 14 24 34 44    43 44 22 32 42
     """,
 }
 
@@ -121,9 +85,11 @@ def codes(n: int, first: int) -> np.ndarray:
     return 100 + 10 * rows + columns
 
 
-def drawn(picture: str) -> np.ndarray:
+def drawn(picture: str, triangle: str) -> np.ndarray:
+    """What is drawn on the left for upper, on the right for lower."""
     lines = [line.split() for line in picture.strip().splitlines()]
-    return np.array([[0 if token == "*" else 100 + int(token) for token in line] for line in lines])
+    both = np.array([[0 if token == "*" else 100 + int(token) for token in ln] for ln in lines])
+    return np.hsplit(both, 2)[triangle == "lower"]
 
 
 def check_picture(layout: Layout, first: int, stored: np.ndarray, **sizes: Any) -> None:
@@ -143,20 +109,20 @@ def check_picture(layout: Layout, first: int, stored: np.ndarray, **sizes: Any) 
 @pytest.mark.parametrize("triangle", TRIANGLES)
 def test_packed_is_the_users_guides(triangle):
     layout = layout_of("packed", n=4, triangle=triangle)
-    check_picture(layout, 1, drawn(PACKED[triangle])[0])
+    check_picture(layout, 1, drawn(PACKED, triangle)[0])
 
 
 @pytest.mark.parametrize("triangle", TRIANGLES)
 def test_band_is_the_users_guides(triangle):
     layout = layout_of("band", n=5, kd=2, triangle=triangle)
-    check_picture(layout, 1, drawn(BAND[triangle]))
+    check_picture(layout, 1, drawn(BAND, triangle))
 
 
 @pytest.mark.parametrize("triangle", TRIANGLES)
 def test_band_keeps_its_picture_in_a_taller_array(triangle):
     layout = layout_of("band", triangle=triangle)
     half = storage.to_half(codes(5, 1), layout, kd=2, ld=4)
-    assert np.array_equal(half[:3], drawn(BAND[triangle]))
+    assert np.array_equal(half[:3], drawn(BAND, triangle))
     assert not half[3].any()
 
 
@@ -166,7 +132,7 @@ def test_band_keeps_its_picture_in_a_taller_array(triangle):
 def test_rfp_is_lapacks(triangle, n, transposed):
     layout = layout_of("rfp", n=n, triangle=triangle, transposed=transposed)
     pictures = RFP_TRANSPOSED if transposed else RFP
-    check_picture(layout, 0, drawn(pictures[triangle, n]).ravel(order="F"))
+    check_picture(layout, 0, drawn(pictures[n], triangle).ravel(order="F"))
 
 
 # --- LAPACK's conversions ----------------------------------------------------------------------
@@ -475,14 +441,14 @@ def test_row_major_is_the_other_triangle_column_major(case):
 # --- the formulas in the headers ---------------------------------------------------------------
 
 ELEMENT = re.compile(
-    r"A\(i,j\)(?: with ([^,\n]+?))?(?:,? in tile p = (.+?), q = (.+?),)?\s+is\s+"
+    r"(conj )?A\(i,j\)(?: with ([^,\n]+?))?(?:,? in tile p = (.+?), q = (.+?),)?\s+is\s+"
     r"(?:a\[(.+)\]|at \((.+), (.+)\))"
 )
 
 
 def reader(case: Case):
-    """The place of an element as the words and symbols of the header have it."""
-    text = "\n".join(case.layout.formula).replace("/", "//")
+    """The place of an element, and whether it is conjugated, as the words of the header have it."""
+    text = "\n".join(case.layout.formula).replace("/", "//").replace(" (rounded down)", "")
     n = case.n
     space: dict[str, Any] = {"n": n, "min": min, **case.sizes}
     if case.layout.name == "rfp":
@@ -496,12 +462,14 @@ def reader(case: Case):
         space[name] = eval(body, space)
     rectangle = re.search(r"element \(row, column\) is a\[(.+)\]", text)
 
-    def place(i: int, j: int) -> int | None:
+    turned = "every element is stored conjugated" in text
+
+    def place(i: int, j: int) -> tuple[int, bool] | None:
         here = {**space, "i": i, "j": j}
         upper = case.layout.triangle == "upper"
         if (i > j) if upper else (i < j):
             return None
-        for when, p, q, index, row, column in ELEMENT.findall(text):
+        for bar, when, p, q, index, row, column in ELEMENT.findall(text):
             if when and not eval(when, here):
                 continue
             if p:
@@ -509,7 +477,7 @@ def reader(case: Case):
             if not index:
                 here |= {"row": eval(row, here), "column": eval(column, here)}
                 index = rectangle[1]
-            return eval(index, here)
+            return eval(index, here), bool(bar) != turned
         return None
 
     return place
@@ -520,4 +488,8 @@ def test_header_formula_is_true(case):
     place = reader(case)
     for rows, columns, places in storage.indices(case.layout, case.layout.environment(case.sizes)):
         for i, j, at in zip(rows, columns, places, strict=True):
-            assert place(*case.folded(int(i), int(j))) == at
+            element = case.folded(int(i), int(j))
+            conjugated = case.layout.hermitian and element != (i, j)
+            told, bar = place(*element)
+            assert told == at
+            assert bar == conjugated or i == j

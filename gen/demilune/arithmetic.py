@@ -32,12 +32,10 @@ if TYPE_CHECKING:
 
 
 @dataclass(frozen=True)
-class NumberType:
-    """An element type: its real type, whether it is complex, and its size in bytes."""
+class RealType:
+    """A real type: its size in bytes and its precision."""
 
     name: str
-    real: str
-    complex: bool
     size: int
     digits: int
     """Bits of the significand (floating point) or of the magnitude (integers)."""
@@ -45,30 +43,61 @@ class NumberType:
     """The real type that holds every product of two elements, if C has one everywhere."""
 
     @property
+    def integer(self) -> bool:
+        return self.name.startswith("int")
+
+
+REALS: dict[str, RealType] = {
+    t.name: t
+    for t in (
+        RealType("float32", 4, 24, "float64"),
+        RealType("float64", 8, 53, None),
+        RealType("int16", 2, 15, "int32"),
+        RealType("int32", 4, 31, "int64"),
+        RealType("int64", 8, 63, None),
+    )
+}
+REAL_SIZE = {name: one.size for name, one in REALS.items()}
+REAL_DIGITS = {name: one.digits for name, one in REALS.items()}
+
+
+@dataclass(frozen=True)
+class NumberType:
+    """An element type: its real type, and whether it is complex."""
+
+    name: str
+    real: str
+    complex: bool = False
+
+    @property
+    def size(self) -> int:
+        """Bytes of an element."""
+        return REAL_SIZE[self.real] * self.parts
+
+    @property
+    def wider(self) -> str | None:
+        return REALS[self.real].wider
+
+    @property
     def parts(self) -> int:
         return 2 if self.complex else 1
 
     @property
     def integer(self) -> bool:
-        return self.real.startswith("int")
+        return REALS[self.real].integer
 
 
 DTYPES: dict[str, NumberType] = {
     t.name: t
     for t in (
-        NumberType("float32", "float32", False, 4, 24, "float64"),
-        NumberType("float64", "float64", False, 8, 53, None),
-        NumberType("complex64", "float32", True, 8, 24, "float64"),
-        NumberType("complex128", "float64", True, 16, 53, None),
-        NumberType("int16", "int16", False, 2, 15, "int32"),
-        NumberType("int32", "int32", False, 4, 31, "int64"),
+        NumberType("float32", "float32"),
+        NumberType("float64", "float64"),
+        NumberType("complex64", "float32", True),
+        NumberType("complex128", "float64", True),
+        NumberType("int16", "int16"),
+        NumberType("int32", "int32"),
     )
 }
-
-REAL_SIZE = {"float32": 4, "float64": 8, "int16": 2, "int32": 4, "int64": 8}
-REAL_DIGITS = {"float32": 24, "float64": 53, "int16": 15, "int32": 31, "int64": 63}
-SPLITTER = {"float32": 2**12 + 1, "float64": 2**27 + 1}
-"""Veltkamp's factor that splits a significand into two halves."""
 
 ACCUMULATORS = {
     "plain": "each sum is rounded to the element type",
@@ -281,6 +310,24 @@ class Arithmetic:
             errors.append(binary("+", total[parts + part], both))
         return (*sums, *errors)
 
+    def accumulate_sum(self, w: Writer, total: Number, left: Number, sums: Number) -> Number:
+        """The running sum ``total`` after ``left`` times the value of the sum ``sums`` is added.
+
+        Of a compensated sum the errors are carried over too: they are not rounded to the element
+        type in between.
+        """
+        half = len(sums) // self.cells
+        result = self.accumulate(w, total, left, sums[:half])
+        if not self.compensated:
+            return result
+        parts = len(result) // 2
+        errors = self.multiply_add(result[parts:], left, sums[half:])
+        return (*result[:parts], *errors)
+
+    def doubled(self, sums: Number) -> Number:
+        """Twice a running sum, exactly."""
+        return add(sums, sums)
+
     def total(self, sums: Number) -> Number:
         """The value of a running sum."""
         if not self.compensated:
@@ -320,7 +367,8 @@ class Arithmetic:
                 f"{meaning} (with a fused multiply-add).",
                 ("a", "b"), self.sums, body, ("p", "e"),
             )  # fmt: skip
-        factor = Constant(float(SPLITTER[self.sums]), self.sums)
+        half = (REAL_DIGITS[self.sums] + 1) // 2
+        factor = Constant(float(2**half + 1), self.sums)  # Veltkamp: splits a significand
 
         def split(name: str, value: Local) -> tuple[Declare, ...]:
             scaled, high = Local(f"{name}_scaled", self.sums), Local(f"{name}_high", self.sums)

@@ -29,7 +29,7 @@ CAUTION = (
 
 def title(plan: Plan) -> str:
     """One line: name and formula."""
-    return f"{plan.spec.name}: {plan.spec.operation.formula}"
+    return f"{plan.spec.name}: {plan.spec.operation.described(plan.spec.layout)}"
 
 
 def specification(spec: Spec) -> list[str]:
@@ -123,10 +123,10 @@ def _argument(plan: Plan, one: Parameter, language: Language) -> str:
         return one.meaning + (f"; {rule}" if rule and rule not in one.meaning else "")
     if one.kind == "scalar":
         kind = "complex" if one.complex else one.type
-        zero = {"alpha": "; 0 reads neither A nor x", "beta": "; 0 never reads y"}[one.name]
-        if plan.spec.operation.name == "rank1":
-            zero = "; 0 changes nothing"
-        return f"{one.meaning}, {kind}{zero}"
+        unread = plan.spec.operation.unread if one.name == "alpha" else ("y",)
+        return f"{one.meaning}, {kind}; where it is 0, {' and '.join(unread)} are not read".replace(
+            "y are", "y is"
+        )
     assert one.extent is not None
     use = {"in": "read", "out": "written", "inout": "read and written", "scratch": "written"}
     count = extent_text(one.extent)
@@ -187,18 +187,19 @@ def costs(plan: Plan) -> list[str]:
         ) else None
         return lines
     step = spec.schedule.block
-    tile = getattr(spec.layout, "tile", 1)
+    tile = spec.layout.period
     unit = step * tile if step > 1 and tile % step else max(step, tile)
+    assumed = f"With {spec.layout.assumes}: " if spec.layout.assumes else ""
     points = {n: flat(plan, spec.layout.sample(n)) for n in (unit * k for k in (2, 4, 6, 8, 10))}
     names = [name for name in next(iter(points.values())) if name != "bytes of locals"]
     formulas = {
         name: polynomial({n: record[name] for n, record in points.items()}) for name in names
     }
     if any(formula is None for formula in formulas.values()):
-        return [f"n = {n}: {_cost_line(record)}" for n, record in list(points.items())[:3]]
+        return [f"{assumed}n = {n}: {_cost_line(record)}" for n, record in list(points.items())[:3]]
     texts = {name: _polynomial_text(formula) for name, formula in formulas.items() if formula}
     when = f" (n a multiple of {unit})" if unit > 1 else ""
-    return [f"{_cost_line(texts)}{when}"]
+    return [f"{assumed}{_cost_line(texts)}{when}"]
 
 
 def _cost_line(record: dict[str, Any]) -> str:

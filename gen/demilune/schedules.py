@@ -11,7 +11,7 @@ from collections.abc import Iterator
 from dataclasses import dataclass
 
 from demilune.keys import key
-from demilune.layouts import Layout
+from demilune.layouts import Diagonal, Group, Layout, Piece
 
 LARGEST_BLOCK = 16
 LARGEST_UNROLLED = 32
@@ -30,6 +30,10 @@ class LoopOrder:
     gather: bool
     scatter: bool
     meaning: str
+
+    def visits(self, group: Group, mirrored: bool) -> tuple[Piece | Diagonal, ...]:
+        """What of a row is visited, in order; the mirrored pieces only if they matter."""
+        return group.row if self.mirrored and mirrored else group.own
 
 
 LOOP_ORDERS: dict[str, LoopOrder] = {
@@ -77,7 +81,7 @@ class Schedule:
         self, layout: Layout, operation: str, allowed: tuple[str, ...], why: str
     ) -> Iterator[tuple[str, str]]:
         """Pairs of a key and why its value cannot be, given the loop orders ``allowed``."""
-        n, tile = layout.n, getattr(layout, "tile", None)
+        n, period = layout.n, layout.period
         if self.loop not in allowed:
             words = " or ".join(f'"{word}"' for word in allowed)
             yield (
@@ -86,8 +90,8 @@ class Schedule:
             )
         if isinstance(n, int) and self.block > n:
             yield "block", f"a block of {self.block} strips is more than the matrix has, n = {n}"
-        elif tile is not None and self.block > tile:
-            yield "block", f"a block of {self.block} strips is more than a tile has, {tile}"
+        elif layout.grouped and self.block > period:
+            yield "block", f"a block of {self.block} strips is more than a tile has, {period}"
         if self.unroll and not (isinstance(n, int) and n <= LARGEST_UNROLLED):
             found = f"{n}" if isinstance(n, int) else f'"{n}"'
             yield (

@@ -166,7 +166,7 @@ def make_spec(name: str, **values: Any) -> Spec:
     values = {**DEFAULTS, **values}
     operation, layout = OPERATIONS[values["operation"]], LAYOUTS[values["layout"]]
     if values.get("loop") is None:
-        values["loop"] = operation.loops[0]
+        values["loop"] = operation.loops()[0]
     if values.get("accumulator") is None and values.get("dtype", "").startswith("int"):
         values["accumulator"] = "wide"
     spec = Spec(
@@ -188,7 +188,7 @@ def _together(spec: Spec) -> Iterator[tuple[str, str]]:
     yield from spec.layout.problems()
     yield from spec.operation.problems(spec.arithmetic)
     yield from spec.schedule.problems(
-        spec.layout, spec.operation.name, spec.operation.loops, spec.operation.why
+        spec.layout, spec.operation.name, spec.operation.loops(), spec.operation.why
     )
     yield from spec.arithmetic.problems()
     if spec.layout.hermitian and not spec.arithmetic.type.complex:

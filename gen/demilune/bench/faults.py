@@ -604,7 +604,7 @@ def order_reversed(plan: Plan) -> Plan:
 @fault("another loop order is used", ("faithful",))
 def another_loop_order(plan: Plan) -> Plan:
     spec, operation = plan.spec, plan.spec.operation
-    others = [loop for loop in operation.loops if loop != spec.schedule.loop]
+    others = [loop for loop in operation.loops() if loop != spec.schedule.loop]
     if not others or spec.arithmetic.type.integer or not spec.arithmetic.in_place:
         return plan
     return _from_spec(plan, replace(spec, schedule=replace(spec.schedule, loop=others[0])))

@@ -126,4 +126,4 @@ def _never_read(problem: Problem, name: str) -> bool:
     scalars = problem.setting.scalars
     if name == "y":
         return scalars.get("beta", 1) == 0
-    return name in ("a", "x") and scalars.get("alpha", 1) == 0
+    return name in problem.plan.spec.operation.unread and scalars.get("alpha", 1) == 0

@@ -184,8 +184,8 @@ class _Bench:
             if value != RUNTIME and value != int(value):
                 level.skipped = f"{name} = {value} makes products that are not representable"
                 return
-        if self.spec.operation.name == "quadform" and self._largest(max(self.sizes), {}) < 1:
-            level.skipped = "n is too large for sums of three factors to be representable"
+        if self._largest(max(self.sizes), {}) < 1:
+            level.skipped = "n is too large for every sum to be representable"
             return
 
         def draw(setting: Setting) -> Draw:
@@ -203,7 +203,7 @@ class _Bench:
         arithmetic, operation = self.spec.arithmetic, self.spec.operation
         digits = REAL_DIGITS[operation.narrowest(arithmetic)]
         if arithmetic.type.complex:  # a product of complex numbers has two terms
-            n, digits = 2 * n, digits - (2 if operation.name != "matvec" else 1)
+            n, digits = 2 * n, digits - 2
         largest: int = operation.limit(max(n, 1), digits, scalars)
         return min(largest, int(2 ** REAL_DIGITS[arithmetic.real] - 1))
 
@@ -298,8 +298,7 @@ class _Bench:
         if scalars.get("beta", 1) == 0 and "y" in problem.buffers and poison:
             problem.buffers["y"][...] = np.nan
         if scalars.get("alpha", 1) == 0 and poison:
-            names = ("x",) if problem.plan.spec.operation.name == "rank1" else ("a", "x")
-            for name in names:
+            for name in problem.plan.spec.operation.unread:
                 problem.buffers[name][...] = np.nan
 
     # --- 5 ---------------------------------------------------------------------------------
@@ -323,16 +322,15 @@ class _Bench:
             level.skipped = "nothing but arrays is passed"
 
     def _bad_arguments(self, setting: Setting) -> Iterator[tuple[str, int]]:
-        names = {one.name for one in self.plan.parameters if one.kind == "size"}
-        bad = {"n": -1, "kd": -1, "incx": 0, "incy": 0}
-        if "ld" in names:
-            leading = setting.sizes["ld"]
-            least = setting.sizes["kd"] + 1 if "kd" in setting.sizes else max(1, setting.n)
-            bad["ld"] = min(leading, least) - 1
-            kd = getattr(self.spec.layout, "kd", None)
-            if kd not in (None, RUNTIME):
-                bad["ld"] = int(kd)
-        yield from ((name, value) for name, value in bad.items() if name in names)
+        """Arguments that the rules refuse, each with the value next to one they accept."""
+        if self.spec.layout.n == RUNTIME:
+            yield "n", -1
+        rules = (*self.spec.layout.rules(), *self.spec.operation.stride_rules())
+        for condition, name, _ in rules:
+            for value in range(int(setting.sizes[name]), -3, -1):
+                if condition.holds({**setting.sizes, name: value}):
+                    yield name, value
+                    break
 
     def _refused(self, level: Level, problem: Problem, name: str) -> None:
         arrays = {

@@ -15,6 +15,7 @@ from typing import Any
 import numpy as np
 import numpy.typing as npt
 
+from demilune.arithmetic import REALS
 from demilune.keys import RUNTIME
 from demilune.plan.build import Plan
 from demilune.plan.tree import Parameter
@@ -25,12 +26,12 @@ Draw = Callable[[np.random.Generator, tuple[int, ...], str], Lanes]
 """Draws real numbers of some shape for ``A``, ``x`` or ``y``; lanes are the last axis."""
 
 PAD = 8
+SIGNALLING = {4: 0x7FA5A5A5, 8: 0x7FF5A5A5A5A5A5A5}
 POISON: dict[str, Any] = {
-    "float32": np.uint32(0x7FA5A5A5),
-    "float64": np.uint64(0x7FF5A5A5A5A5A5A5),
-    "int16": np.uint16(0x5A5A),
-    "int32": np.uint32(0x5A5A5A5A),
-    "int64": np.uint64(0x5A5A5A5A5A5A5A5A),
+    real.name: np.dtype(f"uint{8 * real.size}").type(
+        int.from_bytes(b"\x5a" * real.size) if real.integer else SIGNALLING[real.size]
+    )
+    for real in REALS.values()
 }
 BITS: dict[str, np.dtype[Any]] = {name: value.dtype for name, value in POISON.items()}
 
@@ -195,9 +196,9 @@ def sizes_to_try(plan: Plan) -> list[int]:
     spec = plan.spec
     if spec.layout.n != RUNTIME:
         return [int(spec.layout.n)] * (3 if int(spec.layout.n) <= 64 else 1)
-    block, tile = spec.schedule.block, int(getattr(spec.layout, "tile", 0))
+    block, tile = spec.schedule.block, spec.layout.period
     around = {1, 2, 3, 5, 8, block, block + 1, 2 * block + 1}
-    if tile and tile <= 16:
+    if 1 < tile <= 16:
         around |= {tile, tile + 1, 2 * tile + 1}
     around = {n for n in around if 0 < n <= 33}
     # One that is larger than 16 and leaves something over in every block and tile.

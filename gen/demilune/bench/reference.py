@@ -1,4 +1,7 @@
-"""Results from outside the plan: numpy products of the whole matrix, and exact rationals."""
+"""Results from outside the plan: numpy products of the whole matrix, and exact rationals.
+
+Both use the operation's formula on the whole matrix; nothing of layouts, loops or templates.
+"""
 
 from __future__ import annotations
 
@@ -11,6 +14,20 @@ import numpy as np
 
 from demilune.arithmetic import REAL_DIGITS
 from demilune.bench.problem import PAD, Lanes, Problem, places, stored
+from demilune.operations.base import sizes
+
+
+def result_places(problem: Problem) -> Iterator[tuple[Any, Any]]:
+    """Where the result lies: index arrays into the whole result, and places in its buffer."""
+    name = problem.plan.spec.operation.result
+    if name == "a":
+        for i, j, at in stored(problem.plan, problem.setting.sizes):
+            yield (i, j), PAD + at
+    elif name in problem.vectors:
+        n, step = problem.setting.n, int(problem.setting.sizes[f"inc{name}"])
+        yield (np.arange(n),), PAD + places(n, step)
+    else:
+        yield (np.array([0]),), np.array([PAD])
 
 
 def numpy_product(problem: Problem) -> dict[str, Lanes]:
@@ -18,31 +35,23 @@ def numpy_product(problem: Problem) -> dict[str, Lanes]:
 
     Exact where every partial sum is representable, in whatever order numpy takes them.
     """
-    spec, n = problem.plan.spec, problem.setting.n
+    spec = problem.plan.spec
+    operation, hermitian = spec.operation, spec.layout.hermitian
     after = {name: buffer.copy() for name, buffer in problem.buffers.items()}
+    alpha = problem.setting.scalars.get("alpha", 1)
+    beta = problem.setting.scalars.get("beta", 0)
+    if alpha == 0 and operation.result == "a":
+        return after
     integer = spec.arithmetic.type.integer
+    buffer = after[operation.result]
     for lane in range(problem.lanes):
         matrix = _whole(problem.matrix[..., lane], integer)
-        vectors = {name: _whole(v[..., lane], integer) for name, v in problem.vectors.items()}
-        alpha = problem.setting.scalars.get("alpha", 1)
-        beta = problem.setting.scalars.get("beta", 0)
-        x, y = vectors["x"], vectors["y"]
-        if spec.operation.name == "matvec":
-            at = PAD + places(n, int(problem.setting.sizes["incy"]))
-            result = alpha * (matrix @ x) + (beta * y if beta != 0 else 0)
-            _put(after["y"], at, lane, result)
-        elif spec.operation.name == "quadform":
-            left = x.conj() if spec.layout.hermitian else x
-            _put(after["s"], np.array([PAD]), lane, np.array([left @ (matrix @ x)]))
-        else:
-            right = x.conj() if spec.layout.hermitian else x
-            updated = matrix + alpha * np.outer(x, right)
-            if alpha == 0:
-                continue
-            for i, j, place in stored(problem.plan, problem.setting.sizes):
-                _put(after["a"], PAD + place, lane, updated[i, j])
-                if spec.layout.hermitian:
-                    after["a"][PAD + place[i == j], 1, lane] = 0
+        x, y = (_whole(problem.vectors[name][..., lane], integer) for name in ("x", "y"))
+        result = operation.reference(matrix, x, y, alpha, beta, hermitian)
+        for index, at in result_places(problem):
+            buffer[at, 0, lane] = result[index].real
+            if buffer.shape[1] == 2:
+                buffer[at, 1, lane] = result[index].imag
     return after
 
 
@@ -53,25 +62,42 @@ def _whole(parts: Lanes, integer: bool) -> Lanes:
     return parts[..., 0].astype(np.int64 if integer else np.float64)
 
 
-def _put(buffer: Lanes, at: Any, lane: int, result: Lanes) -> None:
-    buffer[at, 0, lane] = result.real
-    if buffer.shape[1] == 2:
-        buffer[at, 1, lane] = result.imag
+# --- error bounds --------------------------------------------------------------------------------
 
 
-Pair = tuple[Fraction, Fraction]
+@dataclass(frozen=True)
+class Exact:
+    """A complex number with rational parts; arrays of these work with numpy's products."""
 
+    real: Fraction
+    imag: Fraction = Fraction(0)
 
-# --- error bounds ------------------------------------------------------------------------------
+    def __add__(self, other: Any) -> Exact:
+        return Exact(self.real + other.real, self.imag + other.imag)
+
+    __radd__ = __add__
+
+    def __mul__(self, other: Any) -> Any:
+        if isinstance(other, np.ndarray):
+            return NotImplemented
+        return Exact(
+            self.real * other.real - self.imag * other.imag,
+            self.real * other.imag + self.imag * other.real,
+        )
+
+    __rmul__ = __mul__
+
+    def conjugate(self) -> Exact:
+        return Exact(self.real, -self.imag)
 
 
 @dataclass(frozen=True)
 class Result:
     """One exact result, what bounds its error, and what was found."""
 
-    exact: Pair
+    exact: Exact
     outer: Fraction
-    """The sum of the magnitudes of what the last few operations add up."""
+    """Magnitudes of what the last few operations add up."""
     inner: Fraction
     """The same product of absolute values: what the error of a plain sum is relative to."""
     roundings: int
@@ -91,45 +117,39 @@ def errors(problem: Problem, found: dict[str, Lanes], lane: int) -> tuple[float,
     worst, ulps = 0.0, 0.0
     for result in _results(problem, found, lane):
         bound = _bound(problem, result)
-        for got, exact in zip(result.found, result.exact, strict=False):
+        for got, exact in zip(result.found, (result.exact.real, result.exact.imag), strict=False):
             if not np.isfinite(got):
                 return float("inf"), float("inf")
             error = abs(Fraction(float(got)) - exact)
             if error:
-                worst = max(worst, float(error / bound) if bound else float("inf"))
-                ulps = max(ulps, float(error / Fraction(float(np.spacing(np.abs(got))))))
+                worst = max(worst, _ratio(error, bound))
+                ulps = max(ulps, _ratio(error, Fraction(float(np.spacing(np.abs(got))))))
     return worst, ulps
+
+
+def _ratio(above: Fraction, below: Fraction) -> float:
+    try:
+        return float(above / below)
+    except (OverflowError, ZeroDivisionError):
+        return float("inf")
 
 
 def _results(problem: Problem, found: dict[str, Lanes], lane: int) -> Iterator[Result]:
     spec, n = problem.plan.spec, problem.setting.n
-    operation, parts = spec.operation.name, spec.arithmetic.type.parts
+    operation, hermitian = spec.operation, spec.layout.hermitian
     matrix = _exact(problem.matrix[..., lane])
     x, y = (_exact(problem.vectors[name][..., lane]) for name in ("x", "y"))
     alpha = _scalar(problem.setting.scalars.get("alpha", 1), spec.arithmetic.real)
     beta = _scalar(problem.setting.scalars.get("beta", 0), spec.arithmetic.real)
-    rows = [_sum(_times(matrix[i][m], x[m]) for m in range(n)) for i in range(n)]
-    sizes = [sum(_size(matrix[i][m]) * _size(x[m]) for m in range(n)) for i in range(n)]
-    if operation == "matvec":
-        at = PAD + places(n, int(problem.setting.sizes["incy"]))
-        for i in range(n):
-            exact = _plus(_times(alpha, rows[i]), _times(beta, y[i]))
-            rest = _size(beta) * _size(y[i])
-            outer = _size(alpha) * _size(rows[i]) + rest
-            inner = _size(alpha) * sizes[i] + rest
-            yield Result(exact, outer, inner, 2 * parts * n + 8, found["y"][at[i]])
-    elif operation == "quadform":
-        left = [_conjugate(v) if spec.layout.hermitian else v for v in x]
-        exact = _sum(_times(left[i], rows[i]) for i in range(n))
-        size = sum((_size(x[i]) * sizes[i] for i in range(n)), Fraction(0))
-        yield Result(exact, size, size, 2 * parts * n + 8, found["s"][PAD])
-    else:
-        for i, j, place in stored(problem.plan, problem.setting.sizes):
-            for r, c, p in zip(i, j, place, strict=True):
-                right = _conjugate(x[c]) if spec.layout.hermitian else x[c]
-                exact = _plus(matrix[r][c], _times(alpha, _times(x[r], right)))
-                size = _size(matrix[r][c]) + _size(alpha) * _size(x[r]) * _size(x[c])
-                yield Result(exact, size, size, 3 * parts, found["a"][PAD + p])
+    exact = operation.reference(matrix, x, y, alpha, beta, hermitian)
+    outer = operation.last_terms(exact, matrix, x, y, alpha, beta)
+    absolute = [sizes(one) for one in (matrix, x, y)]
+    inner = operation.reference(*absolute, sizes(alpha)[()], sizes(beta)[()], hermitian)
+    roundings = operation.roundings(n, spec.arithmetic.type.parts)
+    for index, at in result_places(problem):
+        each = zip(exact[index], outer[index], inner[index], at, strict=True)
+        for value, last, size, place in each:
+            yield Result(value, last, size, roundings, found[operation.result][place])
 
 
 def _bound(problem: Problem, result: Result) -> Fraction:
@@ -140,7 +160,8 @@ def _bound(problem: Problem, result: Result) -> Fraction:
         return few * result.outer + 2 * _gamma(result.roundings, u) ** 2 * result.inner
     if arithmetic.sums != arithmetic.real:
         wide = _gamma(result.roundings, Fraction(1, 2 ** REAL_DIGITS[arithmetic.sums]))
-        return u * _size(result.exact) + 2 * wide * result.inner
+        size = abs(result.exact.real) + abs(result.exact.imag)
+        return u * size + 2 * wide * result.inner
     return _gamma(result.roundings, u) * result.inner
 
 
@@ -148,37 +169,14 @@ def _gamma(m: int, u: Fraction) -> Fraction:
     return m * u / (1 - m * u)
 
 
-def _exact(parts: Lanes) -> Any:
-    """Nested lists of pairs of rationals."""
-    if parts.ndim == 1:
-        values = [Fraction(float(v)) for v in parts]
-        return (values[0], values[1] if len(values) > 1 else Fraction(0))
-    return [_exact(one) for one in parts]
+def _exact(parts: Lanes) -> Lanes:
+    """An array of exact numbers from an array whose last axis holds the parts."""
+    result = np.empty(parts.shape[:-1], dtype=object)
+    for index in np.ndindex(result.shape):
+        result[index] = Exact(*(Fraction(float(part)) for part in parts[index]))
+    return result
 
 
-def _scalar(value: complex, real: str) -> Pair:
+def _scalar(value: complex, real: str) -> Exact:
     kind = np.dtype(real).type
-    return Fraction(float(kind(value.real))), Fraction(float(kind(value.imag)))
-
-
-def _times(p: Pair, q: Pair) -> Pair:
-    return p[0] * q[0] - p[1] * q[1], p[0] * q[1] + p[1] * q[0]
-
-
-def _plus(p: Pair, q: Pair) -> Pair:
-    return p[0] + q[0], p[1] + q[1]
-
-
-def _sum(items: Any) -> Pair:
-    total = (Fraction(0), Fraction(0))
-    for item in items:
-        total = _plus(total, item)
-    return total
-
-
-def _conjugate(p: Pair) -> Pair:
-    return p[0], -p[1]
-
-
-def _size(p: Pair) -> Fraction:
-    return abs(p[0]) + abs(p[1])
+    return Exact(Fraction(float(kind(value.real))), Fraction(float(kind(value.imag))))

@@ -71,6 +71,10 @@ class Band(Layout):
         return self.width.constant is not None
 
     @property
+    def assumes(self) -> str:
+        return "kd = 2" if self.width.constant is None else ""
+
+    @property
     def formula(self) -> tuple[str, ...]:
         ld = "ld" if self.leading.constant is None else str(self.leading.constant)
         kd = "kd" if self.width.constant is None else str(self.width.constant)

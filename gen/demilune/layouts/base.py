@@ -136,6 +136,8 @@ class Layout:
     source: ClassVar[str]
     """The published source of the storage scheme."""
     orders: ClassVar[tuple[str, ...]] = ("column-major", "row-major")
+    grouped: ClassVar[bool] = False
+    """Whether strips come in groups of ``period``, which a block of strips cannot leave."""
 
     n: Size = key(
         RUNTIME, "rows and columns of the matrix",
@@ -191,6 +193,16 @@ class Layout:
     def known_shape(self) -> bool:
         """Whether all bounds are known once n is."""
         return True
+
+    @property
+    def period(self) -> int:
+        """Strips after which the storage repeats itself: the rows of a tile, else 1."""
+        return 1
+
+    @property
+    def assumes(self) -> str:
+        """What is assumed of sizes that neither n nor the specification tells."""
+        return ""
 
     # --- arrays ----------------------------------------------------------------------------
 

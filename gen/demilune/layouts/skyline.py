@@ -81,6 +81,10 @@ class Skyline(Layout):
         return False
 
     @property
+    def assumes(self) -> str:
+        return "the full profile"
+
+    @property
     def formula(self) -> tuple[str, ...]:
         moving, fixed = ("i", "j") if self.order == "column-major" else ("j", "i")
         if self.tail:

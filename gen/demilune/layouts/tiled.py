@@ -22,6 +22,7 @@ class Tiled(Layout):
     """
 
     name: ClassVar[str] = "tiled"
+    grouped: ClassVar[bool] = True
     rank: ClassVar[int] = 5
     summary: ClassVar[str] = "square tiles one behind the other, the last ones ragged"
     source: ClassVar[str] = "our own; tile storage is common practice in dense linear algebra"
@@ -93,6 +94,10 @@ class Tiled(Layout):
         return self.start(last, last, self.width(last)) + self.width(last) * self.width(last)
 
     @property
+    def period(self) -> int:
+        return self.tile
+
+    @property
     def formula(self) -> tuple[str, ...]:
         b = self.tile
         n = "n" if self.size.constant is None else str(self.size.constant)
@@ -104,7 +109,7 @@ class Tiled(Layout):
         where = "i <= j" if self.triangle == "upper" else "i >= j"
         return (
             f"w(t) = min({b}, {n} - {b}*t) is the width of tile t",
-            f"A(i,j) with {where}, in tile p = {moving}/{b}, q = {fixed}/{b}, is",
+            f"A(i,j) with {where}, in tile p = {moving}/{b}, q = {fixed}/{b} (rounded down), is",
             f"a[start(p,q) + ({fixed} - {b}*q)*w(p) + {moving} - {b}*p]",
             f"start(p,q) = {start}",
         )

@@ -11,7 +11,7 @@ from __future__ import annotations
 from collections.abc import Iterator, Mapping
 from dataclasses import dataclass, field
 from math import isfinite
-from typing import ClassVar
+from typing import Any, ClassVar
 
 import numpy as np
 
@@ -21,7 +21,7 @@ from demilune.keys import RUNTIME, key
 from demilune.layouts import Layout
 from demilune.plan.tree import Constant, Load, Local, Number, Parameter
 from demilune.plan.writer import PARTS, Writer
-from demilune.schedules import LoopOrder
+from demilune.schedules import LOOP_ORDERS, LoopOrder
 
 Scalar = float | int | str
 """A number, or ``"runtime"``."""
@@ -128,10 +128,12 @@ class Operation:
     rank: ClassVar[int] = 9
     summary: ClassVar[str]
     formula: ClassVar[str]
-    loops: ClassVar[tuple[str, ...]]
-    """Loop orders that make sense, the default first."""
+    result: ClassVar[str]
+    """The parameter that holds the result: ``a``, a vector, or a single number."""
+    unread: ClassVar[tuple[str, ...]] = ()
+    """Arrays that are not read where alpha is passed as 0."""
     why: ClassVar[str]
-    """Why the others do not."""
+    """Why some loop orders make no sense."""
     sums: ClassVar[bool] = True
     """Whether there are sums, which an accumulator keeps."""
     mirrored: ClassVar[bool] = True
@@ -140,6 +142,17 @@ class Operation:
     incx: int | str = key(
         1, "stride of x", words=(RUNTIME,), whole=True, nonzero=True, minimum=-1024, maximum=1024
     )
+
+    @classmethod
+    def accepts(cls, order: LoopOrder) -> bool:
+        """Whether the operation can be done in this loop order."""
+        return True
+
+    @classmethod
+    def loops(cls) -> tuple[str, ...]:
+        """The loop orders that make sense; the default first: it reads each element once."""
+        accepted = [one for one in LOOP_ORDERS.values() if cls.accepts(one)]
+        return tuple(one.name for one in sorted(accepted, key=lambda one: one.mirrored))
 
     # --- to be told by each operation ---------------------------------------------------------
 
@@ -173,6 +186,25 @@ class Operation:
     def statement(self, c: Context, backward: bool, block: int) -> tuple[str, ...]:
         """The order of the sums in sentences, for the header."""
         raise NotImplementedError
+
+    def reference(self, a: Any, x: Any, y: Any, alpha: Any, beta: Any, hermitian: bool) -> Any:
+        """The result from the whole matrix, for arrays of any numbers, exact ones included."""
+        raise NotImplementedError
+
+    def last_terms(self, exact: Any, a: Any, x: Any, y: Any, alpha: Any, beta: Any) -> Any:
+        """Magnitudes of what the last few operations add up, given exact rationals.
+
+        The error of a compensated sum is relative to these.
+        """
+        return sizes(exact)
+
+    def roundings(self, n: int, parts: int) -> int:
+        """How many roundings a term of a result can go through, at most."""
+        return 2 * parts * n + 8
+
+    def described(self, layout: Layout) -> str:
+        """The formula with the scalars that the specification fixes."""
+        return self.formula
 
     def limit(self, n: int, digits: int, scalars: Mapping[str, int]) -> int:
         """The largest magnitude of integer inputs that cannot overflow ``digits`` bits.
@@ -246,6 +278,20 @@ class Operation:
         start = c.w.integer(f"start_{name}", back)
         c.vectors[name] = Vector(name, start, step, type, c.parts == 2)
 
+    def all_parameters(
+        self, layout: Layout, arithmetic: Arithmetic, order: LoopOrder
+    ) -> tuple[Parameter, ...]:
+        """The parameters of the routine: sizes, then what the operation needs."""
+        size: tuple[Parameter, ...] = ()
+        if layout.n == RUNTIME:
+            size = (Parameter("n", "size", "rows and columns of A"),)
+        extent = layout.extent.substitute(dict(layout.integers))
+        matrix = Parameter(
+            "a", "array", "the stored half of A", arithmetic.real, arithmetic.type.complex,
+            extent, "in",
+        )  # fmt: skip
+        return (*size, *layout.sizes(), *self.parameters(matrix, layout, arithmetic, order))
+
     def stride_rules(self) -> Iterator[tuple[Compare, str, str]]:
         """Conditions under which a stride is refused."""
         for name in ("incx", "incy"):
@@ -257,6 +303,18 @@ def rounded(value: float | str, real: str) -> float:
     """The number rounded to a floating-point type; infinite if it is too large."""
     with np.errstate(over="ignore"):
         return float(np.dtype(real).type(value))
+
+
+def sizes(numbers: Any) -> Any:
+    """Magnitudes of exact numbers: |re| + |im|, at least as large as |z|."""
+    return np.vectorize(lambda one: abs(one.real) + abs(one.imag), otypes=[object])(numbers)
+
+
+def factor_text(value: Scalar, name: str) -> str:
+    """A scalar as the left factor of a formula; nothing if it is 1."""
+    if value == RUNTIME:
+        return f"{name}*"
+    return {1: "", -1: "-"}.get(value, f"{value}*")  # type: ignore[call-overload,no-any-return]
 
 
 def scaled(c: Context, factor: Number, number: Number) -> Number:

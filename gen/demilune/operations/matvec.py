@@ -5,13 +5,22 @@ from __future__ import annotations
 from collections.abc import Iterator, Mapping
 from dataclasses import dataclass
 from math import isqrt
-from typing import ClassVar
+from typing import Any, ClassVar
 
 from demilune.arithmetic import Arithmetic, add, convert
 from demilune.index import Expr
 from demilune.keys import RUNTIME, key
 from demilune.layouts import Layout
-from demilune.operations.base import Context, Operation, Scalar, Strip, is_unit, scaled
+from demilune.operations.base import (
+    Context,
+    Operation,
+    Scalar,
+    Strip,
+    factor_text,
+    is_unit,
+    scaled,
+    sizes,
+)
 from demilune.plan.tree import Number, Parameter
 from demilune.schedules import LoopOrder
 
@@ -24,7 +33,8 @@ class MatVec(Operation):
     rank: ClassVar[int] = 1
     summary: ClassVar[str] = "matrix times vector, added to a vector"
     formula: ClassVar[str] = "y := alpha*A*x + beta*y"
-    loops: ClassVar[tuple[str, ...]] = ("fused", "dot", "axpy")
+    result: ClassVar[str] = "y"
+    unread: ClassVar[tuple[str, ...]] = ("a", "x")
     why: ClassVar[str] = "a product can be had in every loop order"
 
     alpha: Scalar = key(1, "factor of A*x", words=(RUNTIME,), number=True)
@@ -248,13 +258,16 @@ class MatVec(Operation):
     def statement(self, c: Context, backward: bool, block: int) -> tuple[str, ...]:
         way = "descending" if backward else "ascending"
         in_place = c.arithmetic.in_place
-        start = "beta*y(i)" if in_place else "0"
-        factor = "(alpha*x(k))" if in_place else "x(k)"
+        alpha, beta = factor_text(self.alpha, "alpha"), factor_text(self.beta, "beta")
+        old = "" if self.beta == 0 else f" + {beta}y(i)"
+        end = f"y(i) is {alpha}sum{old}".replace("+ -", "- ")
+        start = ("0" if self.beta == 0 else f"{beta}y(i)") if in_place else "0"
+        factor = f"({alpha}x(k))" if in_place and alpha else "x(k)"
         lines = []
         if not c.order.scatter:
             return (
                 f"The sum of row i starts at 0 and adds A(i,m)*x(m) in {way} order of m; then "
-                "y(i) is alpha*sum + beta*y(i).",
+                f"{end}.",
             )
         lines = [f"The sum of y(i) is kept in {'y(i) itself' if in_place else 'work'}; it starts "
                  f"at {start}."]  # fmt: skip
@@ -275,12 +288,26 @@ class MatVec(Operation):
             )
             lines.append(
                 f"At the end of a {'block' if block > 1 else 'strip'} "
-                f"{'alpha times ' if in_place else ''}the sum of the strip is added to that of "
-                "y(k)."
+                f"{f'{alpha[:-1]} times ' if in_place and alpha[:-1] else ''}the sum of the strip "
+                f"is {'subtracted from' if in_place and alpha == '-' else 'added to'} that of y(k)."
             )
         if not in_place:
-            lines.append("At the end y(i) is alpha*sum + beta*y(i).")
+            lines.append(f"At the end {end}.")
         return tuple(lines)
+
+    def described(self, layout: Layout) -> str:
+        product = f"{factor_text(self.alpha, 'alpha')}A*x"
+        if self.beta == 0:
+            return f"y := {product}"
+        return f"y := {product} + {factor_text(self.beta, 'beta')}y".replace("+ -", "- ")
+
+    def reference(self, a: Any, x: Any, y: Any, alpha: Any, beta: Any, hermitian: bool) -> Any:
+        product = alpha * (a @ x)
+        return product if beta == 0 else product + beta * y
+
+    def last_terms(self, exact: Any, a: Any, x: Any, y: Any, alpha: Any, beta: Any) -> Any:
+        product = sizes(alpha) * sizes(a @ x)
+        return product if beta == 0 else product + sizes(beta) * sizes(y)
 
     def limit(self, n: int, digits: int, scalars: Mapping[str, int]) -> int:
         # alpha*n*M^2 + beta*M <= 2^digits - 1

@@ -4,13 +4,15 @@ from __future__ import annotations
 
 from collections.abc import Mapping
 from dataclasses import dataclass
-from typing import ClassVar
+from typing import Any, ClassVar
 
-from demilune.arithmetic import Arithmetic, add, conjugate, convert
+import numpy as np
+
+from demilune.arithmetic import Arithmetic, conjugate, convert
 from demilune.index import Expr, expr
 from demilune.layouts import Layout
 from demilune.operations.base import Context, Operation, Strip
-from demilune.plan.tree import Number, Parameter
+from demilune.plan.tree import Parameter
 from demilune.schedules import LoopOrder
 
 
@@ -22,8 +24,12 @@ class QuadForm(Operation):
     rank: ClassVar[int] = 3
     summary: ClassVar[str] = "quadratic form"
     formula: ClassVar[str] = "s := x^T*A*x (x^H*A*x, a real number, if Hermitian)"
-    loops: ClassVar[tuple[str, ...]] = ("fused", "dot")
+    result: ClassVar[str] = "s"
     why: ClassVar[str] = "its result is one number, and axpy scatters into a vector"
+
+    @classmethod
+    def accepts(cls, order: LoopOrder) -> bool:
+        return order.gather
 
     def parameters(
         self, matrix: Parameter, layout: Layout, arithmetic: Arithmetic, order: LoopOrder
@@ -72,11 +78,12 @@ class QuadForm(Operation):
     def close(self, c: Context, strip: Strip) -> None:
         a, w = c.arithmetic, c.w
         x = w.bind("xk", c.term("x", strip.k))
-        row: Number = w.bind("total", a.total(strip.sum))
+        row = strip.sum
         if not c.order.mirrored:
-            row = w.bind("row", a.multiply_add(add(row, row), strip.diagonal, x))
+            twice = w.bind("twice", a.doubled(row), c.parts)
+            row = w.bind("row", a.accumulate(w, twice, strip.diagonal, x), c.parts)
         left = conjugate(x) if c.layout.hermitian else x
-        w.assign(c.totals, a.accumulate(w, c.totals, left, row))
+        w.assign(c.totals, a.accumulate_sum(w, c.totals, left, row))
 
     def epilogue(self, c: Context) -> None:
         total = convert(c.arithmetic.total(c.totals), c.arithmetic.result)
@@ -86,17 +93,30 @@ class QuadForm(Operation):
         way = "descending" if backward else "ascending"
         left = "conj(x(k))" if c.layout.hermitian else "x(k)"
         real = ", of which only the real part is computed" if c.layout.hermitian else ""
+        carried = (
+            (f"Times {left}, the errors of the row's sum are added to the errors of s.",)
+            if c.arithmetic.compensated
+            else ()
+        )
         if c.order.mirrored:
             return (
                 f"The sum of row k starts at 0 and adds A(k,m)*x(m) in {way} order of m; then "
                 f"s, which starts at 0, adds {left}*sum in {way} order of k{real}.",
+                *carried,
             )
         return (
             f"Strips k are visited in {way} order, each in {way} order of its index m. The sum of "
             "a strip starts at 0 and adds A(k,m)*x(m) for its off-diagonal elements; then row is "
             f"(sum + sum) + A(k,k)*x(k), and s, which starts at 0, adds {left}*row in {way} order "
             f"of k{real}.",
+            *carried,
         )
+
+    def described(self, layout: Layout) -> str:
+        return "s := x^H*A*x, a real number" if layout.hermitian else "s := x^T*A*x"
+
+    def reference(self, a: Any, x: Any, y: Any, alpha: Any, beta: Any, hermitian: bool) -> Any:
+        return np.array([(x.conj() if hermitian else x) @ (a @ x)])
 
     def limit(self, n: int, digits: int, scalars: Mapping[str, int]) -> int:
         # n^2*M^3 <= 2^digits - 1

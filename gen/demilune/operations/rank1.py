@@ -5,13 +5,15 @@ from __future__ import annotations
 from collections.abc import Iterator, Mapping
 from dataclasses import dataclass, replace
 from math import isqrt
-from typing import ClassVar
+from typing import Any, ClassVar
+
+import numpy as np
 
 from demilune.arithmetic import Arithmetic, conjugate, convert
 from demilune.index import Expr
 from demilune.keys import RUNTIME, key
 from demilune.layouts import Layout
-from demilune.operations.base import Context, Operation, Scalar, Strip, is_unit, scaled
+from demilune.operations.base import Context, Operation, Scalar, Strip, factor_text, is_unit, scaled
 from demilune.plan.tree import Constant, Number, Parameter
 from demilune.schedules import LoopOrder
 
@@ -24,12 +26,17 @@ class RankOne(Operation):
     rank: ClassVar[int] = 2
     summary: ClassVar[str] = "update with the outer product of a vector"
     formula: ClassVar[str] = "A := alpha*x*x^T + A (x*x^H if Hermitian)"
-    loops: ClassVar[tuple[str, ...]] = ("axpy",)
+    result: ClassVar[str] = "a"
+    unread: ClassVar[tuple[str, ...]] = ("x",)
     why: ClassVar[str] = "an update changes each stored element once, and there is no sum to gather"
     sums: ClassVar[bool] = False
     mirrored: ClassVar[bool] = False
 
     alpha: Scalar = key(1, "factor of x*x^T", words=(RUNTIME,), number=True)
+
+    @classmethod
+    def accepts(cls, order: LoopOrder) -> bool:
+        return order.scatter and not order.gather
 
     def problems(self, arithmetic: Arithmetic) -> Iterator[tuple[str, str]]:
         yield from super().problems(arithmetic)
@@ -106,6 +113,16 @@ class RankOne(Operation):
                 "The imaginary part of the diagonal is not read and becomes 0; alpha is real."
             )
         return tuple(lines)
+
+    def described(self, layout: Layout) -> str:
+        right = "x^H" if layout.hermitian else "x^T"
+        return f"A := {factor_text(self.alpha, 'alpha')}x*{right} + A"
+
+    def reference(self, a: Any, x: Any, y: Any, alpha: Any, beta: Any, hermitian: bool) -> Any:
+        return a + alpha * np.outer(x, x.conj() if hermitian else x)
+
+    def roundings(self, n: int, parts: int) -> int:
+        return 3 * parts
 
     def limit(self, n: int, digits: int, scalars: Mapping[str, int]) -> int:
         # alpha*M^2 + M <= 2^digits - 1

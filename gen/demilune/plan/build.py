@@ -46,32 +46,20 @@ class Plan:
 
 def make_plan(spec: Spec) -> Plan:
     """The plan of a specification that has been checked."""
-    parameters = _parameters(spec)
+    order = spec.schedule.order
+    parameters = spec.operation.all_parameters(spec.layout, spec.arithmetic, order)
     names = [one.name for one in parameters if one.kind != "scalar" or not one.complex]
     names += [one.name + part for one in parameters if one.complex for part in PARTS]
     w = Writer((*names, spec.name), unroll=spec.schedule.unroll)
-    c = Context(w, spec.layout, spec.arithmetic, spec.schedule.order)
+    c = Context(w, spec.layout, spec.arithmetic, order)
     _Walk(spec, c).all()
-    order = spec.operation.statement(c, spec.schedule.backward, spec.schedule.block)
+    sentences = spec.operation.statement(c, spec.schedule.backward, spec.schedule.block)
     functions = tuple(w.functions.values())
     return Plan(
         spec,
         Routine(spec.name, parameters, pruned(w.body), functions),
-        (*spec.arithmetic.statement, *order),
+        (*spec.arithmetic.statement, *sentences),
     )
-
-
-def _parameters(spec: Spec) -> tuple[Parameter, ...]:
-    layout, arithmetic = spec.layout, spec.arithmetic
-    size: tuple[Parameter, ...] = ()
-    if layout.n == RUNTIME:
-        size = (Parameter("n", "size", "rows and columns of A"),)
-    matrix = Parameter(
-        "a", "array", "the stored half of A", arithmetic.real, arithmetic.type.complex,
-        layout.extent.substitute(dict(layout.integers)), "in",
-    )  # fmt: skip
-    rest = spec.operation.parameters(matrix, layout, arithmetic, spec.schedule.order)
-    return (*size, *layout.sizes(), *rest)
 
 
 class _Walk:
@@ -81,7 +69,6 @@ class _Walk:
         self.spec, self.c, self.w = spec, context, context.w
         self.operation, self.layout = spec.operation, spec.layout
         self.backward, self.block = spec.schedule.backward, spec.schedule.block
-        self.mirrored = context.order.mirrored and self.operation.mirrored
 
     def all(self) -> None:
         self._refuse()
@@ -149,7 +136,7 @@ class _Walk:
         operation, c = self.operation, self.c
         ks = self._turned(ks)
         strips = [operation.open(c, k) for k in ks]
-        for one in self._turned(list(group.row if self.mirrored else group.own)):
+        for one in self._turned(list(c.order.visits(group, operation.mirrored))):
             if isinstance(one, Diagonal):
                 for strip in strips:
                     operation.diagonal(c, strip, one.place(strip.k))

@@ -39,7 +39,6 @@ class CExecutable:
         self._ffi.cdef(prototype(plan) + ";")
         self._library = self._ffi.dlopen(str(library))
         self._call: Callable[..., int | None] = getattr(self._library, plan.spec.name)
-        self._types: dict[str, str] = getattr(syntax("c")["TYPES"], "copy", dict)()
         self._positions = {argument_position(plan, p.name): p.name for p in plan.parameters}
 
     def __call__(self, arguments: Mapping[str, Any]) -> str | None:
@@ -57,7 +56,7 @@ class CExecutable:
                 return [float(complex(value).real), float(complex(value).imag)]
             return [int(value) if one.type.startswith("int") else float(value)]
         address = value.__array_interface__["data"][0]
-        kind = "ptrdiff_t" if one.kind == "places" else self._types[one.type]
+        kind = syntax("c")["c_type"]("size" if one.kind == "places" else one.type)
         return [self._ffi.cast(f"{kind} *", address)]
 
 
