@@ -193,7 +193,7 @@ def test_integers_of_the_stated_size_cannot_overflow(values, tmp_path):
     calls = {"whole": call_text(plan, next(settings_of(plan, ())), extent)}
     (tmp_path / "main.c").write_text(program([plan], ["whole.h"], calls))
     for much, clean in ((largest, True), (largest + 1, False)):
-        if much == 2 ** (plan.spec.arithmetic.type.digits):
+        if much == 2 ** (int(values["dtype"][3:]) - 1):
             continue  # the elements themselves are the limit
         flags = [*SANITIZERS, f"-DLARGEST={much}"]
         build(tmp_path, "gcc", *flags, *names, "main.c", "-o", "main")

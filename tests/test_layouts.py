@@ -461,14 +461,10 @@ def reader(case: Case):
     for name, body in re.findall(r"^(cut) = (.+)$", text, re.M):
         space[name] = eval(body, space)
     rectangle = re.search(r"element \(row, column\) is a\[(.+)\]", text)
-
     turned = "every element is stored conjugated" in text
 
-    def place(i: int, j: int) -> tuple[int, bool] | None:
+    def place(i: int, j: int) -> tuple[int, bool]:
         here = {**space, "i": i, "j": j}
-        upper = case.layout.triangle == "upper"
-        if (i > j) if upper else (i < j):
-            return None
         for bar, when, p, q, index, row, column in ELEMENT.findall(text):
             if when and not eval(when, here):
                 continue
@@ -478,7 +474,7 @@ def reader(case: Case):
                 here |= {"row": eval(row, here), "column": eval(column, here)}
                 index = rectangle[1]
             return eval(index, here), bool(bar) != turned
-        return None
+        raise AssertionError(f"nothing is said of A({i},{j})")
 
     return place
 

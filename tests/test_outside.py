@@ -131,22 +131,50 @@ def matrix_for(numbers: Numbers, n: int, kd: int, hermitian: bool) -> np.ndarray
     return whole
 
 
-def standard_half(whole: np.ndarray, layout: str, triangle: str, kd: int) -> np.ndarray:
-    """The array that BLAS takes, made without this project."""
-    n = len(whole)
-    named = np.triu(whole) if triangle == "upper" else np.tril(whole)
-    if layout == "packed":
-        letter = {v: k for k, v in DTYPES.items()}[str(whole.dtype)]
-        return getattr(lapack, letter + "trttp")(named, uplo=triangle[0].upper())[0]
-    if layout == "full":
-        return np.asfortranarray(named)
-    rows = np.zeros((kd + 1, n), dtype=whole.dtype, order="F")
-    for off in range(min(kd, n - 1) + 1):
-        if triangle == "upper":
-            rows[kd - off, off:] = np.diagonal(whole, off)
-        else:
-            rows[off, : n - off] = np.diagonal(whole, -off)
-    return rows
+@dataclass(frozen=True)
+class Standard:
+    """A routine of the standard for one triangle, given whole matrices."""
+
+    stem: str
+    letter: str
+    triangle: str
+
+    def half(self, whole, kd):
+        """The array that BLAS takes, made without this project."""
+        n, upper = len(whole), self.triangle == "upper"
+        named = np.triu(whole) if upper else np.tril(whole)
+        if self.stem[1] == "p":
+            return getattr(lapack, self.letter + "trttp")(named, uplo="LU"[upper])[0]
+        if self.stem[1] != "b":
+            return np.asfortranarray(named)
+        rows = np.zeros((kd + 1, n), dtype=whole.dtype, order="F")
+        for off in range(min(kd, n - 1) + 1):
+            if upper:
+                rows[kd - off, off:] = np.diagonal(whole, off)
+            else:
+                rows[off, : n - off] = np.diagonal(whole, -off)
+        return rows
+
+    def product(self, whole, kd, x, y, alpha, beta, incx, incy):
+        """The elements of y."""
+        call = getattr(blas, self.letter + self.stem, None)
+        if call is None:
+            return alpha * (whole @ taken(x, incx)) + beta * taken(y, incy)
+        sizes = {"p": (len(whole),), "b": (kd,)}.get(self.stem[1], ())
+        strides = {"incx": incx, "incy": incy, "lower": self.triangle == "lower"}
+        half = self.half(whole, kd)
+        return taken(call(*sizes, alpha, half, x, beta=beta, y=y, **strides), incy)
+
+    def update(self, whole, x, alpha, incx):
+        """The triangle of A."""
+        call, n, half = getattr(blas, self.letter + self.stem), len(whole), self.half(whole, 0)
+        if self.letter + self.stem in ("cspr", "zspr"):  # OpenBLAS mistakes negative strides
+            x, incx = taken(x, incx).copy(), 1
+        lower = self.triangle == "lower"
+        if half.ndim == 2:
+            return call(alpha, x, n=n, a=half, incx=incx, lower=lower)
+        packed = call(n, alpha, x, half, incx=incx, lower=lower)
+        return getattr(lapack, self.letter + "tpttr")(n, packed, uplo="UL"[lower])[0]
 
 
 class Places:
@@ -189,24 +217,6 @@ def taken(array: np.ndarray, stride: int) -> np.ndarray:
     return array[:: abs(stride)][:: 1 if stride > 0 else -1]
 
 
-def standard_product(stem: str, letter: str, half: np.ndarray, triangle: str, kd: int, whole: Any,
-                     alpha: Any, x: np.ndarray, incx: int, beta: Any, y: np.ndarray,
-                     incy: int) -> np.ndarray:  # fmt: skip
-    """y of the standard's routine, all of the array."""
-    call = getattr(blas, letter + stem, None)
-    options = {"incx": incx, "beta": beta, "y": y, "incy": incy, "lower": triangle == "lower"}
-    if call is None:
-        result = y.copy()
-        rest = beta * taken(y, incy) if beta != 0 else 0
-        taken(result, incy)[:] = alpha * (whole @ taken(x, incx)) + rest
-        return result
-    if stem[1:] == "pmv":
-        return call(len(whole), alpha, half, x, **options)
-    if stem[1:] == "bmv":
-        return call(kd, alpha, half, x, **options)
-    return call(alpha, half, x, **options)
-
-
 def check_near(found: np.ndarray, reference: np.ndarray, bound: np.ndarray, exact: bool) -> None:
     """Equal, or each part no further than both results may be from the exact one."""
     if exact:
@@ -224,29 +234,25 @@ def test_product_is_the_standards(stem, letter):
     structure = "hermitian" if hermitian else "symmetric"
     common = {"layout": layout, "structure": structure, "dtype": dtype, **runtime}
     for made in kernels([common], TRIANGLES, SCHEDULES):
-        triangle = made.spec.layout.triangle
+        standard = Standard(stem, letter, made.spec.layout.triangle)
         for n, exact in product(BANDWIDTH, (True, False)):
             numbers, sizes = Numbers(dtype, exact), sizes_of(layout, n)
             kd = sizes.get("kd", n)
             whole = matrix_for(numbers, n, kd, hermitian)
             half = Places(made, n, sizes).poisoned(whole)
-            reference = standard_half(whole, layout, triangle, kd)
             for (incx, incy), (alpha, beta) in numbers.settings:
                 x = spread(numbers.draw(1, n), incx)
                 start = numbers.draw(2, n)
                 y = spread(start * np.nan if beta == 0 else start, incy)
-                clean = spread(start, incy)
-                expected = standard_product(stem, letter, reference, triangle, kd, whole, alpha, x,
-                                            incx, beta, clean, incy)  # fmt: skip
                 given = {"alpha": alpha, "beta": beta, "incx": incx, "incy": incy}
-                made(half, x, y, **given, **({"kd": kd} if layout == "band" else {}))
+                expected = standard.product(whole, kd, x, spread(start, incy), **given)
+                made(half, x, y, **given, **sizes)
                 # A complex sum of n products is a real one of 2n; alpha and beta add a few.
                 bound = float(gamma(2 * n + 8, dtype)) * (
                     size(alpha) * (size(whole) @ size(taken(x, incx))) + size(beta) * size(start)
                 )
-                check_near(taken(y, incy), taken(expected, incy), bound, exact)
-                gaps = np.isnan(y)
-                assert gaps.sum() == len(y) - n, "an element between the strides was written"
+                check_near(taken(y, incy), expected, bound, exact)
+                assert np.isnan(y).sum() == len(y) - n, "an element between the strides was written"
 
 
 @pytest.mark.parametrize(("stem", "letter"), routines(UPDATES))
@@ -257,7 +263,7 @@ def test_update_is_the_standards(stem, letter):
     common = {"operation": "rank1", "layout": layout, "structure": structure, "dtype": dtype,
               "alpha": "runtime", "incx": "runtime"}  # fmt: skip
     for made in kernels([common], TRIANGLES, orders):
-        triangle = made.spec.layout.triangle
+        standard = Standard(stem, letter, made.spec.layout.triangle)
         for n, exact in product(BANDWIDTH, (True, False)):
             numbers = Numbers(dtype, exact)
             places = Places(made, n, sizes_of(layout, n))
@@ -268,7 +274,7 @@ def test_update_is_the_standards(stem, letter):
                 values = numbers.draw(1, n)
                 x, half = spread(values, incx), before.copy(order="K")
                 made(half, x, alpha=alpha, incx=incx)
-                expected = standard_update(stem, letter, whole, layout, triangle, alpha, x, incx)
+                expected = standard.update(whole, x, alpha, incx)
                 squares = np.outer(size(values), size(values))
                 bound = float(gamma(8, dtype)) * (size(whole) + size(alpha) * squares)
                 at = np.unravel_index(places.elements, whole.shape)
@@ -276,20 +282,6 @@ def test_update_is_the_standards(stem, letter):
                 assert np.isnan(half[~places.used]).all(), "the other triangle was written"
                 if hermitian and alpha != 0:
                     assert (half.imag[places.diagonal] == 0).all()
-
-
-def standard_update(stem: str, letter: str, whole: np.ndarray, layout: str, triangle: str,
-                    alpha: Any, x: np.ndarray, incx: int) -> np.ndarray:  # fmt: skip
-    """The triangle that the standard's routine gives."""
-    call, n = getattr(blas, letter + stem), len(whole)
-    if letter + stem in ("cspr", "zspr"):  # OpenBLAS starts a negative stride at the wrong end
-        x, incx = taken(x, incx).copy(), 1
-    options = {"incx": incx, "lower": triangle == "lower"}
-    half = standard_half(whole, layout, triangle, n)
-    if layout == "full":
-        return call(alpha, x, n=n, a=half, **options)
-    packed = call(n, alpha, x, half, **options)
-    return getattr(lapack, letter + "tpttr")(n, packed, uplo=triangle[0].upper())[0]
 
 
 # Layouts that the standard does not have are held against the same routines on the whole array.
@@ -305,15 +297,17 @@ def ways(layout: str) -> list[dict[str, Any]]:
 
 @pytest.mark.parametrize(
     ("operation", "loops"),
-    [("matvec", ("dot", "axpy")), ("quadform", ("dot", "fused")), ("rank1", ("axpy", "axpy"))],
+    [("matvec", ("axpy", "fused")), ("quadform", ("dot", "fused")), ("rank1", ("axpy", "axpy"))],
 )
 @pytest.mark.parametrize("layout", sorted(LAYOUTS))
 def test_complex_matrices_in_every_layout(layout, operation, loops):
     numbers = Numbers("complex128", True)
     common = {"operation": operation, "layout": layout, "dtype": numbers.dtype}
-    structures = [{"structure": "symmetric"}, {"structure": "hermitian"}]
-    orders = [{"loop": loops[0], "block": 2}, {"loop": loops[1], "direction": "backward"}]
-    for made in kernels([common], TRIANGLES, ways(layout), structures, orders):
+    structures = [
+        {"structure": "symmetric", "loop": loops[0], "direction": "backward"},
+        {"structure": "hermitian", "loop": loops[1], "block": 2},
+    ]
+    for made in kernels([common], TRIANGLES, ways(layout), structures):
         hermitian = made.spec.layout.hermitian
         for n in (7, 10):
             whole, x = matrix_for(numbers, n, n, hermitian), numbers.draw(1, n)
@@ -328,7 +322,7 @@ def test_complex_matrices_in_every_layout(layout, operation, loops):
 
 # The data sets that scikit-learn bundles: breast_cancer (UCI, Wolberg and others, 1995), wine (UCI,
 # Forina and others), diabetes (Efron, Hastie, Johnstone, Tibshirani, Annals of Statistics 32(2),
-# 2004), digits (UCI, Alpaydin and Kaynak, 1998). Their sources as scikit-learn names them.
+# 2004), digits (UCI, Alpaydin and Kaynak, 1998); these origins from memory.
 
 DATA = ("breast_cancer", "wine", "diabetes", "digits")
 
@@ -387,7 +381,7 @@ def run(made: Kernel, matrix: np.ndarray, *vectors: np.ndarray) -> Any:
     }.get(layout.name, {})
     half = made.to_half(matrix, **sizes)
     for x in vectors:
-        result = made(half, x, **passed(sizes))
+        result = made(half, x, **sizes)
     return made.to_full(half, n, **sizes) if made.spec.operation.name == "rank1" else result
 
 
@@ -395,11 +389,6 @@ def profile(lengths: list[int], tail: bool) -> np.ndarray:
     """Places of the diagonal elements, which begin (tail) or end strips of these lengths."""
     ends = np.cumsum([0, *lengths])
     return (ends if tail else ends[1:] - 1).astype(np.intp)
-
-
-def passed(sizes: dict[str, Any]) -> dict[str, Any]:
-    """Those sizes that a call cannot see in its arrays."""
-    return {name: value for name, value in sizes.items() if name in ("kd", "diagonal")}
 
 
 def rational_of(values: Any) -> list[Fraction]:
@@ -464,27 +453,22 @@ def test_variances_along_a_direction(layout):
 
 
 @pytest.mark.parametrize("layout", sorted(LAYOUTS))
-def test_covariance_built_from_updates(layout):
-    """Rank-1 updates, one a sample, add up to the covariance that numpy computes."""
-    data = samples("wine")
-    deviations = data - data.mean(axis=0)
-    count, n = deviations.shape
-    expected = np.cov(deviations, rowvar=False)
-    squares = np.abs(deviations).T @ np.abs(deviations) / (count - 1)
-    limit = 2 * float(gamma(2 * count, "d")) * squares
-    common = {"operation": "rank1", "layout": layout, "alpha": 1 / (count - 1)}
-    for made in kernels([common], TRIANGLES):
-        assert (np.abs(run(made, np.zeros((n, n)), *deviations) - expected) <= limit).all()
+def test_moments_built_from_updates(layout):
+    """Rank-1 updates, one a sample, add up to what numpy computes of all samples at once.
 
-
-@pytest.mark.parametrize("layout", sorted(LAYOUTS))
-def test_moments_of_whole_numbers_are_exact(layout):
-    """The pixels are 0 to 16: sums of their products are exact even in single precision."""
-    pixels = samples("digits")[:200].astype(np.float32)
-    expected = pixels.astype(np.int64).T @ pixels.astype(np.int64)
-    common = {"operation": "rank1", "layout": layout, "dtype": "float32"}
-    for made in kernels([common], TRIANGLES):
-        assert np.array_equal(run(made, np.zeros((64, 64)), *pixels), expected)
+    The pixels are 0 to 16: sums of their products are exact even in single precision.
+    """
+    wine, pixels = samples("wine"), samples("digits")[:200].astype(np.float32)
+    deviations, share = wine - wine.mean(axis=0), 1 / (len(wine) - 1)
+    squares = np.abs(deviations).T @ np.abs(deviations) * share
+    limit = 2 * float(gamma(2 * len(wine), "d")) * squares
+    common = {"operation": "rank1", "layout": layout}
+    for made in kernels([{**common, "alpha": share}], TRIANGLES):
+        found = run(made, np.zeros((13, 13)), *deviations)
+        assert (np.abs(found - np.cov(deviations, rowvar=False)) <= limit).all()
+    for made in kernels([{**common, "dtype": "float32"}], TRIANGLES):
+        found = run(made, np.zeros((64, 64)), *pixels)
+        assert np.array_equal(found, pixels.astype(int).T @ pixels.astype(int))
 
 
 # --- a stiffness matrix from outside -------------------------------------------------------------
@@ -525,7 +509,6 @@ def test_products_with_a_stiffness_matrix(layout, loop):
     n, (exact, absolute) = 147, real.products
     terms = 2 * 23 + 1  # a row of the band; the others add exact zeros
     for made in kernels([{"layout": layout, "loop": loop}], TRIANGLES, ways(layout)):
-        triangle = made.spec.layout.triangle
         if layout == "band":
             sizes: dict[str, Any] = {"kd": 23, "ld": 24}
         else:
@@ -534,11 +517,11 @@ def test_products_with_a_stiffness_matrix(layout, loop):
             sizes = {"diagonal": profile(lengths, made.spec.layout.tail)}
         half = made.to_half(real.matrix, **sizes)
         assert np.array_equal(made.to_full(half, n, **sizes), real.matrix)
-        y = made(half, real.x, **passed(sizes))
+        y = made(half, real.x, **sizes)
         bound = [gamma(terms, "d") * a for a in absolute]
         assert within(y, exact, bound)
-        reference = standard_half(real.matrix, "band", triangle, 23)
-        by_blas = blas.dsbmv(23, 1.0, reference, real.x, lower=triangle == "lower")
+        standard = Standard("sbmv", "d", made.spec.layout.triangle)
+        by_blas = standard.product(real.matrix, 23, real.x, np.zeros(n), 1, 0, 1, 1)
         assert within(y, rational_of(by_blas), [2 * b for b in bound])
 
 

@@ -183,7 +183,7 @@ def costs(plan: Plan) -> list[str]:
         record = flat(plan, spec.layout.sample(int(spec.layout.n)))
         lines = [_cost_line(record)]
         lines.append(f"The product alone is 2n^2 = {2 * int(spec.layout.n) ** 2}.") if (
-            spec.operation.name == "matvec" and not spec.arithmetic.type.complex
+            spec.operation.result == "y" and not spec.arithmetic.type.complex
         ) else None
         return lines
     step = spec.schedule.block

@@ -25,6 +25,7 @@ class Problem:
         where = [self.file] if self.file else []
         where += [f"kernel {self.kernel}"] if self.kernel else []
         where += [f"key {self.key}"] if self.key else []
+        where = ["".join(c if c.isprintable() else "?" for c in part) for part in where]
         return f"{', '.join(where)}: {self.message}" if where else self.message
 
 

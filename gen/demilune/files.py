@@ -37,6 +37,9 @@ def prepare(folder: Path) -> None:
 
 def refuse_foreign(folder: Path, names: Mapping[str, str], force: bool) -> None:
     """Raises :class:`InputError` if a file is in the way that Demilune did not write."""
+    folders = [name for name in names if (folder / name).is_dir()]
+    if folders:
+        raise InputError(f"{folder / folders[0]} is a folder, and a file is to be written there")
     foreign = [name for name in names if (folder / name).exists() and not ours(folder / name)]
     if foreign and not force:
         raise InputError(

@@ -31,6 +31,10 @@ class Language:
     pseudo: bool
     breaks_anywhere: bool
     """Whether a statement may be broken at any space; else only inside brackets."""
+    default: bool
+    """Whether routines are written in it where the specification does not say."""
+    runs: str
+    """How routines are run here: ``cffi``, ``python``, or ``nothing``."""
     helpers: Mapping[str, tuple[str, ...]]
     """Functions of :mod:`demilune.primitives` that go into a file, by what needs them."""
 
@@ -49,6 +53,8 @@ def _read(folder: Path) -> Language:
         reserved=frozenset(facts["reserved"].split()),
         pseudo=facts.get("pseudo", False),
         breaks_anywhere=facts["breaks_anywhere"],
+        default=facts.get("default", False),
+        runs=facts.get("runs", "nothing"),
         helpers={need: tuple(names) for need, names in facts.get("helpers", {}).items()},
     )
 

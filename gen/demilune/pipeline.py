@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import hashlib
 import json
+import os
 import platform
 from collections.abc import Callable, Iterable
 from dataclasses import dataclass, field
@@ -22,7 +23,7 @@ from demilune.render import render
 from demilune.spec import Spec
 from demilune.toolchain import cache
 from demilune.toolchain.build import Unit, build_units, flags_for
-from demilune.toolchain.compilers import HOW_TO_GET, all_compilers, find_compiler, has_fma
+from demilune.toolchain.compilers import USUAL, describe_compiler, find_compiler, has_fma
 from demilune.version import __version__
 
 EVIDENCE = "evidence.json"
@@ -217,18 +218,19 @@ def targets() -> list[dict[str, Any]]:
     rows: list[dict[str, Any]] = [
         {"what": "python", "found": True, "detail": f"{platform.python_version()}, runs here"}
     ]
-    compilers = {one.name: one for one in all_compilers()}
-    for name in dict.fromkeys(["gcc", "clang", *compilers]):
-        found = compilers.get(name)
-        detail = found.version if found else f"for C kernels; {HOW_TO_GET}"
-        rows.append({"what": f"c ({name})", "found": found is not None, "detail": detail})
+    for name in dict.fromkeys([*([named] if (named := os.environ.get("CC")) else []), *USUAL]):
+        try:
+            detail, found = describe_compiler(name).version, True
+        except MissingError as error:
+            detail, found = str(error), False
+        rows.append({"what": f"c ({name})", "found": found, "detail": detail})
     fma = (
         "fma = true runs at full speed"
         if has_fma()
-        else ("fma = true works hosted, slowly; freestanding it is refused")
+        else "fma = true works hosted, slowly; freestanding it is refused"
     )
     rows.append({"what": "fused multiply-add", "found": has_fma(), "detail": fma})
     pages = "reads and writes outside an array are caught" if guard.AVAILABLE else guard.WHY_NOT
     rows.append({"what": "guard pages", "found": guard.AVAILABLE, "detail": pages})
-    rows.append({"what": "compiled libraries", "found": True, "detail": str(cache.cache_folder())})
+    rows.append({"what": "compiled libraries", "found": True, "detail": str(cache.used_folder())})
     return rows

@@ -15,8 +15,8 @@ def _single(value):
         return value
     if abs(value) >= 2.0**128:
         return math.copysign(math.inf, value)
-    # Adding and taking away a number whose last bit is worth as much as that of the result
-    # rounds there; below 2**-126 the last bit is worth 2**-149.
+    # Adding and taking away a number whose last bit is worth as much as that of the
+    # result rounds there; below 2**-126 the last bit is worth 2**-149.
     unit = math.ldexp(1.5, max(math.frexp(value)[1], -125) + 28)
     rounded = value + unit - unit
     if abs(rounded) >= 2.0**128:

@@ -13,7 +13,6 @@ from typing import Any
 from demilune import primitives
 from demilune.arithmetic import REAL_SIZE
 from demilune.contract import contract, file_head, title
-from demilune.errors import Problem, SpecError
 from demilune.expressions import ExpressionWriter, templates
 from demilune.languages import ALL, Language
 from demilune.plan.build import Plan
@@ -117,7 +116,6 @@ class _Renderer(ExpressionWriter):
         return [inspect.getsource(getattr(primitives, name)).rstrip() for name in names]
 
     def _routine(self, plan: Plan) -> dict[str, Any]:
-        self._check_names(plan)
         body = self._scalars(plan)
         body += self._block(plan.routine.body, reports=_reports(plan), plan=plan)
         routine = {
@@ -162,11 +160,6 @@ class _Renderer(ExpressionWriter):
             "use": one.use, "length": length, "complex": one.complex,
         }  # fmt: skip
 
-    def _check_names(self, plan: Plan) -> None:
-        if plan.spec.name in {one.name for one in plan.parameters}:
-            message = f'"{plan.spec.name}" is the name of a parameter of the routine'
-            raise SpecError([Problem(message, plan.spec.name, "name")])
-
     def _function(self, one: Function) -> dict[str, Any]:
         body = self._block(one.body, reports=False, plan=None)
         return {
@@ -207,7 +200,9 @@ class _Renderer(ExpressionWriter):
             return s["integer"](one.name, self.integer(one.value))
         if isinstance(one, For):
             low, high = self.integer(one.low), self.integer(one.high)
-            return s["loop"](one.variable, low, high, one.step, one.backward, block(one.body))
+            last = self.integer(one.high - one.step)
+            inside = block(one.body)
+            return s["loop"](one.variable, low, high, last, one.step, one.backward, inside)
         if isinstance(one, If):
             then, otherwise = block(one.then), block(one.otherwise)
             return s["branch"](self.condition(one.condition), then, otherwise)

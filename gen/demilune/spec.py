@@ -6,6 +6,7 @@ are gathered, checked together and turned into a :class:`Spec`.
 
 from __future__ import annotations
 
+import json
 import math
 import re
 from collections.abc import Iterator, Mapping
@@ -25,6 +26,8 @@ from demilune.targets import Target
 OPERATION = Key("what is computed", words=tuple(OPERATIONS))
 LAYOUT = Key("where the half lies", words=tuple(LAYOUTS))
 DEFAULTS = {"operation": "matvec", "layout": "full"}
+DECISIVE = {"operation", "layout", "dtype", "n"}
+"""Keys on which so much depends that nothing else can be told while they are wrong."""
 LONGEST_NAME = 63
 """C99 (5.2.4.1) promises as many significant characters for internal names."""
 
@@ -92,6 +95,13 @@ def known_keys(operation: str | None = None, layout: str | None = None) -> dict[
     return found
 
 
+def all_keys(name: str) -> list[Key]:
+    """What the operations and layouts that have a key called ``name`` allow for it."""
+    choices = (*LAYOUTS.values(), *OPERATIONS.values(), Schedule, Arithmetic, Target)
+    found = [keys_of(choice)[name] for choice in choices if name in keys_of(choice)]
+    return found or [{"operation": OPERATION, "layout": LAYOUT}[name]]
+
+
 def accepts(key: Key, value: Any) -> bool:
     """Whether ``value`` is one that ``key`` allows."""
     if isinstance(value, bool):
@@ -102,7 +112,10 @@ def accepts(key: Key, value: Any) -> bool:
         above = key.minimum is None or value >= key.minimum
         below = key.maximum is None or value <= key.maximum
         return above and below and not (key.nonzero and value == 0)
-    return key.number and isinstance(value, int | float) and math.isfinite(value)
+    try:
+        return key.number and isinstance(value, int | float) and math.isfinite(value)
+    except OverflowError:  # a whole number beyond all floats
+        return False
 
 
 def value_problems(name: str, values: Mapping[str, Any]) -> Iterator[Problem]:
@@ -116,7 +129,7 @@ def value_problems(name: str, values: Mapping[str, Any]) -> Iterator[Problem]:
     everywhere = known_keys()
     for key, value in values.items():
         if key not in everywhere:
-            message = f'unknown key "{key}"{nearest(key, here)} (allowed: {", ".join(here)})'
+            message = f"unknown key {shown(key)}{nearest(key, here)} (allowed: {', '.join(here)})"
             yield Problem(message, name, key)
         elif key not in here:
             yield Problem(
@@ -131,10 +144,12 @@ def value_problems(name: str, values: Mapping[str, Any]) -> Iterator[Problem]:
 
 
 def shown(value: Any) -> str:
-    """A value as a specification writes it, cut where it is long."""
+    """A value as a specification writes it, on one line, cut where it is long."""
     if isinstance(value, bool):
         return "true" if value else "false"
-    text = f'"{value}"' if isinstance(value, str) else repr(value)
+    if isinstance(value, int) and abs(value) >= 10**60:
+        return f"a whole number of more than {60} digits"
+    text = json.dumps(value, ensure_ascii=False) if isinstance(value, str) else repr(value)
     return text if len(text) <= 60 else f"{text[:57]}..."
 
 
@@ -160,10 +175,14 @@ def name_problems(name: str, what: str = "name") -> Iterator[Problem]:
 
 def make_spec(name: str, **values: Any) -> Spec:
     """A checked specification from keywords; raises :class:`SpecError` with every problem."""
+    if not isinstance(name, str):
+        raise SpecError([Problem(f"found {shown(name)}; a name is a text", key="name")])
     problems = [*name_problems(name), *value_problems(name, values)]
-    if problems:
+    bad = {problem.key for problem in problems}
+    if bad & DECISIVE:
         raise SpecError(problems)
-    values = {**DEFAULTS, **values}
+    # What is wrong is left at its default, so that the rest can be checked together.
+    values = {**DEFAULTS, **{key: value for key, value in values.items() if key not in bad}}
     operation, layout = OPERATIONS[values["operation"]], LAYOUTS[values["layout"]]
     if values.get("loop") is None:
         values["loop"] = operation.loops()[0]
@@ -177,7 +196,7 @@ def make_spec(name: str, **values: Any) -> Spec:
         pick(Arithmetic, values),
         pick(Target, values),
     )
-    problems = [Problem(message, name, key) for key, message in _together(spec)]
+    problems += [Problem(message, name, key) for key, message in _together(spec)]
     if problems:
         raise SpecError(problems)
     return spec
@@ -199,6 +218,9 @@ def _together(spec: Spec) -> Iterator[tuple[str, str]]:
                 'one is "symmetric"'
             ),
         )
+    parameters = spec.operation.all_parameters(spec.layout, spec.arithmetic, spec.schedule.order)
+    if spec.schedule.loop in spec.operation.loops() and spec.name in {p.name for p in parameters}:
+        yield "name", f'"{spec.name}" is the name of a parameter of the routine'
     if spec.target.file is not None:
         for problem in name_problems(spec.target.file, "file"):
             yield "file", problem.message

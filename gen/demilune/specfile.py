@@ -13,8 +13,9 @@ loop = ["dot", "axpy", "fused"]
 from __future__ import annotations
 
 import itertools
+import math
 import tomllib
-from collections.abc import Iterator, Mapping
+from collections.abc import Hashable, Iterator, Mapping
 from dataclasses import dataclass, replace
 from pathlib import Path
 from typing import Any
@@ -24,7 +25,16 @@ from demilune.keys import defaults_of, nearest
 from demilune.languages import LANGUAGES
 from demilune.layouts import LAYOUTS
 from demilune.operations import OPERATIONS
-from demilune.spec import Spec, choices_for, known_keys, make_spec, shown
+from demilune.spec import (
+    DEFAULTS,
+    Spec,
+    accepts,
+    all_keys,
+    choices_for,
+    known_keys,
+    make_spec,
+    shown,
+)
 
 TABLES = ("defaults", "kernel")
 LARGEST_PRODUCT = 100_000
@@ -57,8 +67,8 @@ def read(path: str | Path) -> SpecFile:
 def parse(text: str, file: str = "specification") -> tuple[Spec, ...]:
     """The specifications that a TOML text stands for; ``file`` is named in messages."""
     try:
-        document = tomllib.loads(text)
-    except tomllib.TOMLDecodeError as error:
+        document = tomllib.loads(text.removeprefix("\ufeff"))
+    except (ValueError, RecursionError) as error:  # also what Python limits: digits, nesting
         raise SpecError([Problem(f"not TOML: {error}", file=file)]) from error
     problems = list(_document_problems(document))
     kernels = document.get("kernel")
@@ -86,7 +96,8 @@ def _document_problems(document: Mapping[str, Any]) -> Iterator[Problem]:
     for key in document:
         if key not in TABLES:
             yield Problem(
-                f'unknown table "{key}"{nearest(key, TABLES)} (allowed: [defaults], [kernel.NAME])',
+                f"unknown table {shown(key)}{nearest(key, TABLES)} "
+                "(allowed: [defaults], [kernel.NAME])",
                 key=key,
             )
     for key in TABLES:
@@ -100,7 +111,13 @@ def _document_problems(document: Mapping[str, Any]) -> Iterator[Problem]:
         for key in defaults:
             if key not in known:
                 yield Problem(
-                    f'unknown key "{key}"{nearest(key, known)} (allowed: {", ".join(known)})',
+                    f"unknown key {shown(key)}{nearest(key, known)} (allowed: {', '.join(known)})",
+                    "[defaults]",
+                    key,
+                )
+            elif not any(accepts(one, v) for one in all_keys(key) for v in _listed(defaults[key])):
+                yield Problem(
+                    f"found {shown(defaults[key])}, allowed is {known[key].allowed}",
                     "[defaults]",
                     key,
                 )
@@ -115,42 +132,62 @@ def expand(
     under the same name. Defaults that a kernel's operation or layout has no use for are left out.
     """
     given = {**_usable(table, defaults or {}), **table}
-    given.setdefault("language", list(LANGUAGES))
-    empty = [key for key, value in given.items() if isinstance(value, list) and not value]
-    if empty:
-        raise SpecError([Problem("found an empty list; it stands for no kernel", name, empty[0])])
+    given.setdefault("language", [name for name, one in LANGUAGES.items() if one.default])
     lists = {key: value if isinstance(value, list) else [value] for key, value in given.items()}
-    repeated = [k for k, v in lists.items() if len({(type(one), str(one)) for one in v}) < len(v)]
-    if repeated:
-        message = f"found {shown(lists[repeated[0]])}, in which a value stands twice"
-        raise SpecError([Problem(message, name, repeated[0])])
-    total = 1
-    for value in lists.values():
-        total *= len(value)
+    problems = list(_list_problems(name, lists))
+    total = math.prod(len(value) for value in lists.values())
     if total > LARGEST_PRODUCT:
-        raise SpecError([Problem(f"{total} combinations are more than {LARGEST_PRODUCT}", name)])
+        problems.append(Problem(f"{total} combinations are more than {LARGEST_PRODUCT}", name))
+    if total == 0 or total > LARGEST_PRODUCT:
+        raise SpecError(problems)
     varied = [key for key, value in lists.items() if len(value) > 1 and key != "language"]
-    specs, problems = [], []
+    made: dict[tuple[str, str], Spec] = {}
     for combination in itertools.product(*lists.values()):
-        values = dict(zip(lists, combination, strict=True))
-        variant = "_".join([name, *(_short(key, values[key]) for key in varied)])
+        values = _fitting(dict(zip(lists, combination, strict=True)), lists)
+        variant = "_".join([name, *(_short(key, values[key]) for key in varied if key in values)])
         try:
-            specs.append(make_spec(variant, **values))
+            spec = make_spec(variant, **values)
         except SpecError as error:
             problems += [replace(p, kernel=p.kernel and name) for p in error.problems]
+        else:
+            made.setdefault((spec.language, spec.name), spec)
     if problems:
         raise SpecError(list(dict.fromkeys(problems)))
-    return specs
+    return list(made.values())
+
+
+def _list_problems(name: str, lists: Mapping[str, list[Any]]) -> Iterator[Problem]:
+    for key, values in lists.items():
+        if not values:
+            yield Problem("found an empty list; it stands for no kernel", name, key)
+        kinds = [(isinstance(one, bool), one) for one in values if isinstance(one, Hashable)]
+        if len(set(kinds)) < len(kinds):
+            yield Problem(f"found {shown(values)}, in which a value stands twice", name, key)
+
+
+def _fitting(values: dict[str, Any], lists: Mapping[str, list[Any]]) -> dict[str, Any]:
+    """The values without keys that only another operation or layout of the lists has."""
+    chosen = {**DEFAULTS, **values}
+    here = known_keys(str(chosen["operation"]), str(chosen["layout"]))
+    others: set[str] = set()
+    for operation in lists.get("operation", [DEFAULTS["operation"]]):
+        for layout in lists.get("layout", [DEFAULTS["layout"]]):
+            if operation in OPERATIONS and layout in LAYOUTS:
+                others |= known_keys(operation, layout).keys()
+    return {key: value for key, value in values.items() if key in here or key not in others}
 
 
 def _usable(table: Mapping[str, Any], defaults: Mapping[str, Any]) -> dict[str, Any]:
-    operation = table.get("operation", defaults.get("operation"))
-    layout = table.get("layout", defaults.get("layout"))
-    known = known_keys(
-        operation if isinstance(operation, str) else None,
-        layout if isinstance(layout, str) else None,
-    )
+    """The defaults that one of the table's operations and layouts has a use for."""
+    known: set[str] = set()
+    for operation in _listed({**DEFAULTS, **defaults, **table}["operation"]):
+        for layout in _listed({**DEFAULTS, **defaults, **table}["layout"]):
+            known |= known_keys(str(operation), str(layout)).keys()
     return {key: value for key, value in defaults.items() if key in known}
+
+
+def _listed(value: Any) -> list[Any]:
+    return value if isinstance(value, list) else [value]
 
 
 def _short(key: str, value: Any) -> str:

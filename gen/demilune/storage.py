@@ -6,7 +6,8 @@ them; all others are one-dimensional.
 
 from __future__ import annotations
 
-from collections.abc import Iterator
+import operator
+from collections.abc import Iterator, Mapping
 from typing import Any
 
 import numpy as np
@@ -32,12 +33,47 @@ def indices(layout: Layout, sizes: dict[str, Any]) -> Iterator[tuple[Array, Arra
         yield (moving, fixed, at) if column_major else (fixed, moving, at)
 
 
-def sizes_for(layout: Layout, n: int, given: dict[str, Any]) -> dict[str, Any]:
-    """All sizes of a matrix of ``n`` rows; what is not ``given`` is the plainest."""
-    if layout.n != "runtime" and n != layout.n:
+def whole_number(name: str, value: Any) -> int:
+    """``value`` as an int; raises :class:`InputError` if it is none."""
+    if isinstance(value, bool | np.bool_):
+        raise InputError(f"{name} is {value!r}; a whole number is needed")
+    try:
+        return operator.index(value)
+    except TypeError as error:
+        raise InputError(f"{name} is {value!r}; a whole number is needed") from error
+
+
+def sizes_for(
+    layout: Layout, n: int, given: Mapping[str, Any], matrix: Array | None = None
+) -> dict[str, Any]:
+    """All sizes of a matrix of ``n`` rows, checked; open ones are those that ``matrix`` needs."""
+    if n < 0:
+        raise InputError(f"n = {n}; at least 0 is needed")
+    if layout.n not in ("runtime", n):
         raise InputError(f"the specification has n = {layout.n}, the matrix has {n} rows")
-    sizes = {**layout.sample(n), **{k: v for k, v in given.items() if v is not None}}
-    return layout.environment(sizes)
+    allowed = [one.name for one in (*layout.sizes(), *layout.after())]
+    sizes: dict[str, Any] = {"n": n}
+    for name, value in given.items():
+        if name not in allowed:
+            raise InputError(
+                f'layout "{layout.name}" as specified has no size "{name}" '
+                f"(allowed: {', '.join(allowed) or 'none'})"
+            )
+        if value is not None:
+            sizes[name] = value if isinstance(value, np.ndarray) else whole_number(name, value)
+    if matrix is not None:
+        sizes = {**layout.sizes_of_matrix(matrix), **sizes}
+    for name in (one.name for one in (*layout.sizes(), *layout.after()) if one.name != "ld"):
+        if name not in sizes:
+            raise InputError(f"{name} must be passed: the specification leaves it open")
+    problems = list(layout.argument_problems(sizes))
+    sizes = layout.environment(layout.complete(sizes))
+    for condition, name, rule in layout.rules():
+        if condition.holds(sizes):
+            problems.append(f"{name} = {sizes[name]}; it must be {rule}")
+    if problems:
+        raise InputError(problems[0])
+    return sizes
 
 
 def empty_half(layout: Layout, sizes: dict[str, Any], dtype: npt.DTypeLike, fill: Any = 0) -> Array:
@@ -59,13 +95,16 @@ def flat(layout: Layout, half: Array) -> Array:
 def to_half(matrix: npt.ArrayLike, layout: Layout, **sizes: Any) -> Array:
     """The stored half of a square ``matrix``, of which only the layout's triangle is read.
 
-    ``sizes`` are those of the layout: ``ld``, ``kd``, ``diagonal``. Elements outside a band or
-    profile are left out; the unused places of the array are zero.
+    ``sizes`` are those that the specification leaves open (``ld``, ``kd``, ``diagonal``); what is
+    not passed is as small as the matrix allows. Elements outside a band or profile that is
+    passed are left out; the unused places of the array are zero.
     """
     whole = np.asarray(matrix)
     if whole.ndim != 2 or whole.shape[0] != whole.shape[1]:
         raise InputError(f"a square matrix is needed, not an array of shape {whole.shape}")
-    known = sizes_for(layout, whole.shape[0], sizes)
+    if whole.dtype.kind not in "iufc":
+        raise InputError(f"the matrix holds {whole.dtype}; numbers are needed")
+    known = sizes_for(layout, whole.shape[0], sizes, whole)
     half = empty_half(layout, known, whole.dtype)
     target = flat(layout, half)
     upper = layout.triangle == "upper"
@@ -79,14 +118,23 @@ def to_half(matrix: npt.ArrayLike, layout: Layout, **sizes: Any) -> Array:
 
 
 def to_full(half: npt.ArrayLike, layout: Layout, n: int, **sizes: Any) -> Array:
-    """The whole matrix of ``n`` rows from its stored half; zero where nothing is stored."""
+    """The whole matrix of ``n`` rows from its stored half; zero where nothing is stored.
+
+    Sizes that a two-dimensional array tells (``ld``, ``kd``) need not be passed.
+    """
     stored = np.asarray(half)
-    known = sizes_for(layout, n, sizes)
+    given = dict(sizes)
+    if stored.ndim == 2 and layout.two_dimensional:
+        rows = stored.shape[0 if layout.order == "column-major" else 1]
+        told = layout.sizes_of_array(rows)
+        if any(one.name == "ld" for one in layout.after()):
+            told["ld"] = rows
+        given = {**told, **given}
+    known = sizes_for(layout, whole_number("n", n), given)
     source = flat(layout, stored)
-    if source.size < max(0, layout.extent.value(known)) and n > 0:
-        raise InputError(
-            f"the half of n = {n} has {layout.extent.value(known)} elements, not {source.size}"
-        )
+    needed = max(0, layout.extent.value(known)) if n > 0 else 0
+    if source.size < needed:
+        raise InputError(f"the half of n = {n} has {needed} elements, not {source.size}")
     whole = np.zeros((n, n), dtype=stored.dtype)
     for i, j, at in indices(layout, known):
         whole[i, j] = source[at]

@@ -374,7 +374,7 @@ def conjugation_missing(plan: Plan) -> Plan:
     spec = replace(plan.spec, layout=replace(layout, structure="symmetric"))
     changed = make_plan(spec)
     same = [p.name for p in changed.parameters] == [p.name for p in plan.parameters]
-    one_part = plan.spec.operation.name != "matvec"
+    one_part = plan.spec.operation.result != "y"
     return plan if not same or one_part else _with(plan, changed.routine.body)
 
 
@@ -383,7 +383,7 @@ def conjugation_on_the_wrong_side(plan: Plan) -> Plan:
     if not plan.spec.layout.hermitian:
         return plan
     layout = plan.spec.layout
-    if len(layout.orders) == 1 or plan.spec.operation.name == "rank1":
+    if len(layout.orders) == 1 or plan.spec.operation.result == "a":
         return _imaginary_sign(plan, "x")
     return _imaginary_sign(plan, "a")
 

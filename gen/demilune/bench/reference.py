@@ -143,8 +143,9 @@ def _results(problem: Problem, found: dict[str, Lanes], lane: int) -> Iterator[R
     beta = _scalar(problem.setting.scalars.get("beta", 0), spec.arithmetic.real)
     exact = operation.reference(matrix, x, y, alpha, beta, hermitian)
     outer = operation.last_terms(exact, matrix, x, y, alpha, beta)
-    absolute = [sizes(one) for one in (matrix, x, y)]
-    inner = operation.reference(*absolute, sizes(alpha)[()], sizes(beta)[()], hermitian)
+    sized = [sizes(one) for one in (matrix, x, y)]
+    scalars = sizes(alpha)[()], sizes(beta)[()]
+    inner = operation.reference(sized[0], sized[1], sized[2], scalars[0], scalars[1], hermitian)
     roundings = operation.roundings(n, spec.arithmetic.type.parts)
     for index, at in result_places(problem):
         each = zip(exact[index], outer[index], inner[index], at, strict=True)

@@ -5,6 +5,7 @@ from __future__ import annotations
 import difflib
 import functools
 import sys
+import textwrap
 from collections.abc import Callable
 from pathlib import Path
 from typing import Any
@@ -15,6 +16,7 @@ from demilune import files, pipeline, storage
 from demilune.cli import show
 from demilune.cli.starter import STARTER
 from demilune.errors import DemiluneError, InputError
+from demilune.keys import nearest
 from demilune.plan.build import Plan, make_plan
 from demilune.plan.counts import flat as flat_counts
 from demilune.render import pseudo_code
@@ -25,13 +27,13 @@ from demilune.version import __version__
 INTERRUPTED = 130
 Command = Callable[..., int | None]
 
-SPEC = click.argument("spec", type=click.Path(path_type=Path))
+SPEC = click.argument("spec", type=click.Path(path_type=Path, readable=False))
 JSON = click.option("--json", "as_json", is_flag=True, help="Print the report as JSON.")
 QUIET = click.option("-q", "--quiet", is_flag=True, help="Show no progress.")
 FORCE = click.option("--force", is_flag=True, help="Write over files of somebody else, too.")
 ONLY = click.option(
     "-k", "--kernel", "only", multiple=True, metavar="NAME",
-    help="Only kernels whose name begins with NAME; may be repeated.",
+    help="Only kernels whose name begins with NAME, and those that share a file with one.",
 )  # fmt: skip
 OUTPUT = click.option(
     "-o", "--output", "folder", type=click.Path(path_type=Path), default=Path("build_out"),
@@ -57,6 +59,7 @@ def guarded(command: Command) -> Command:
     def run(*arguments: Any, **options: Any) -> None:
         try:
             status = command(*arguments, **options)
+            sys.stdout.flush()
         except DemiluneError as problem:
             show.error(problem, bool(options.get("as_json")))
             sys.exit(problem.status)
@@ -66,6 +69,9 @@ def guarded(command: Command) -> Command:
         except BrokenPipeError:
             sys.stderr.close()
             sys.exit(0)
+        except OSError as problem:
+            show.message(f"demilune: the output cannot be written: {problem.strerror}")
+            sys.exit(2)
         sys.exit(status or 0)
 
     return run
@@ -85,10 +91,16 @@ def _specs(source: SpecFile, only: tuple[str, ...]) -> list[Spec]:
     if not only:
         return list(source.specs)
     chosen = [s for s in source.specs if any(s.name.startswith(name) for name in only)]
-    if not chosen:
-        names = ", ".join(dict.fromkeys(spec.name for spec in source.specs))
-        raise InputError(f"{source.path}: no kernel begins with {' or '.join(only)}: {names}")
-    return chosen
+    names = list(dict.fromkeys(spec.name for spec in source.specs))
+    for name in only:
+        if not any(one.startswith(name) for one in names):
+            few = ", ".join(names[:8]) + (", ..." if len(names) > 8 else "")
+            raise InputError(
+                f'{source.path}: no kernel begins with "{name}"{nearest(name, names)} ({few})'
+            )
+    # A file is written whole: the kernels that share one with a chosen kernel come along.
+    shared = {(spec.file, spec.language) for spec in chosen}
+    return [spec for spec in source.specs if (spec.file, spec.language) in shared]
 
 
 @main.command()
@@ -100,8 +112,11 @@ def init(path: Path, as_json: bool) -> None:
 
     Example: demilune init my_matrix.toml
     """
-    if path.exists():
-        raise InputError(f"{path} exists already; choose another name")
+    with files.explained(path):
+        if path.exists():
+            raise InputError(f"{path} exists already; choose another name")
+        if path.parent.exists() and not path.parent.is_dir():
+            raise InputError(f"{path.parent} is a file, and {path.name} cannot lie in it")
     files.write_all(path.parent, {path.name: STARTER})
     if as_json:
         show.as_json({"written": str(path)})
@@ -136,8 +151,9 @@ def plan_record(made: Plan) -> dict[str, Any]:
     sizes = [int(layout.n)] if layout.n != "runtime" else [8, 64, 512]
     return {
         "kernel": made.spec.name,
-        "formula": made.spec.operation.formula,
+        "formula": made.spec.operation.described(layout),
         "specification": made.spec.stated,
+        "assumed": layout.assumes,
         "index formula": list(layout.formula),
         "storage": storage.picture(layout),
         "arithmetic": list(made.order),
@@ -150,8 +166,12 @@ def plan_text(record: dict[str, Any]) -> str:
     """The same for people."""
     lines = [f"{record['kernel']}: {record['formula']}", ""]
     for name in ("index formula", "storage", "arithmetic", "pseudo-code"):
-        lines += [f"{name}:", *("    " + line for line in record[name]), ""]
-    lines.append("counts of one call (loads and stores in elements):")
+        found = record[name]
+        if name == "arithmetic":
+            found = [line for sentence in found for line in textwrap.wrap(sentence, 86)]
+        lines += [f"{name}:", *("    " + line for line in found), ""]
+    assumed = f", with {record['assumed']}" if record["assumed"] else ""
+    lines.append(f"counts of one call{assumed} (loads and stores in elements):")
     columns = list(record["counts"])
     rows = list(record["counts"][columns[0]])
     width = max(map(len, rows))
@@ -277,8 +297,9 @@ def targets(as_json: bool) -> None:
 
 
 @main.command("schema")
+@JSON
 @guarded
-def schema_command() -> None:
+def schema_command(as_json: bool) -> None:
     """Print the JSON Schema of specification files.
 
     Example: demilune schema > specification.schema.json

@@ -35,7 +35,11 @@ def message(text: str) -> None:
 
 def as_json(record: Any) -> None:
     """A report as JSON, to stdout."""
-    print(json.dumps(record, indent=1, ensure_ascii=False))
+    text = json.dumps(record, indent=1, ensure_ascii=False)
+    try:
+        print(text)
+    except UnicodeEncodeError:
+        print(json.dumps(record, indent=1))
 
 
 def error(problem: DemiluneError, json_too: bool) -> None:
@@ -79,7 +83,7 @@ def outcome(result: Outcome) -> None:
             cases, seconds = str(row.verdict.cases), f"{row.verdict.seconds:.2f}"
             facts = row.verdict.levels[2].facts
             if "largest error / bound" in facts:
-                worst = f"{facts['largest error / bound']:.2f} of the bound"
+                worst = f"{facts['largest error / bound']:.2g} of the bound"
             elif row.verdict.levels[2].skipped:
                 worst = "none (integers)" if row.spec.arithmetic.type.integer else "not bounded"
         status = Text(row.status, style=COLOURS[row.status])

@@ -2,11 +2,12 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterator
+from collections.abc import Iterator, Mapping
 from dataclasses import dataclass
 from typing import Any, ClassVar
 
 import numpy as np
+import numpy.typing as npt
 
 from demilune.index import Compare, Environment, Expr, expr, maximum, minimum, symbol
 from demilune.keys import RUNTIME, key
@@ -117,6 +118,28 @@ class Band(Layout):
                     "ld",
                     f"the leading dimension {self.ld} is less than kd + 1 = {int(self.kd) + 1}",
                 )
+
+    two_dimensional: ClassVar[bool] = True
+
+    @property
+    def rows(self) -> Expr:
+        return self.width + 1
+
+    def sizes_of_array(self, rows: int) -> dict[str, Any]:
+        return {"kd": rows - 1} if self.width.constant is None else {}
+
+    def sizes_of_matrix(self, matrix: npt.NDArray[Any]) -> dict[str, Any]:
+        if self.width.constant is not None:
+            return {}
+        i, j = np.nonzero(matrix)
+        distance = j - i if self.triangle == "upper" else i - j
+        return {"kd": int(distance.max(initial=0))}
+
+    def complete(self, sizes: Mapping[str, Any]) -> dict[str, Any]:
+        known = dict(sizes)
+        if self.leading.constant is None:
+            known.setdefault("ld", self.width.value(known) + 1)
+        return known
 
     def shape(self, env: Environment) -> tuple[int, ...]:
         n, ld = self.size.value(env), self.leading.value(env)

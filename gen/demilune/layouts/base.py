@@ -14,6 +14,7 @@ from dataclasses import dataclass, replace
 from typing import Any, ClassVar, TypeAlias
 
 import numpy as np
+import numpy.typing as npt
 
 from demilune.index import Compare, Environment, Expr, Substitution, Term, expr, symbol
 from demilune.keys import RUNTIME, key
@@ -205,6 +206,36 @@ class Layout:
         return ""
 
     # --- arrays ----------------------------------------------------------------------------
+
+    two_dimensional: ClassVar[bool] = False
+    """Whether numpy users know the half as a two-dimensional array, a strip in each column
+    (column-major) or row; then the layout has ``rows`` and ``leading``."""
+
+    @property
+    def rows(self) -> Expr:
+        """Elements of a strip's column in a two-dimensional array."""
+        raise NotImplementedError
+
+    @property
+    def leading(self) -> Expr:
+        """Elements from one column of a two-dimensional array to the next."""
+        raise NotImplementedError
+
+    def sizes_of_array(self, rows: int) -> dict[str, Any]:
+        """Sizes that follow from a two-dimensional array with so many rows."""
+        return {}
+
+    def sizes_of_matrix(self, matrix: npt.NDArray[Any]) -> dict[str, Any]:
+        """The smallest sizes with which the whole ``matrix`` can be stored."""
+        return {}
+
+    def complete(self, sizes: Mapping[str, Any]) -> dict[str, Any]:
+        """``sizes`` with those that follow from the others."""
+        return dict(sizes)
+
+    def argument_problems(self, sizes: Mapping[str, Any]) -> Iterator[str]:
+        """What is wrong with arrays of sizes, which a routine itself does not check."""
+        return iter(())
 
     def shape(self, env: Environment) -> tuple[int, ...]:
         """The shape of a numpy array that holds the half."""

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterator
+from collections.abc import Iterator, Mapping
 from dataclasses import dataclass
 from typing import Any, ClassVar
 
@@ -67,6 +67,18 @@ class Full(Layout):
                 yield "ld", 'a fixed leading dimension needs a fixed n; use ld = "runtime"'
             elif int(self.ld or 0) < int(self.n):
                 yield "ld", f"the leading dimension {self.ld} is less than n = {self.n}"
+
+    two_dimensional: ClassVar[bool] = True
+
+    @property
+    def rows(self) -> Expr:
+        return self.size
+
+    def complete(self, sizes: Mapping[str, Any]) -> dict[str, Any]:
+        known = dict(sizes)
+        if self.leading.constant is None:
+            known.setdefault("ld", max(1, known["n"]))
+        return known
 
     def shape(self, env: Environment) -> tuple[int, ...]:
         n, ld = self.size.value(env), self.leading.value(env)

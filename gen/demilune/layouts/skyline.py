@@ -2,10 +2,12 @@
 
 from __future__ import annotations
 
+from collections.abc import Iterator, Mapping
 from dataclasses import dataclass
 from typing import Any, ClassVar
 
 import numpy as np
+import numpy.typing as npt
 
 from demilune.index import Compare, Environment, Expr, choice, element, expr
 from demilune.layouts.base import Diagonal, Group, Layout, Piece, from_to
@@ -122,6 +124,29 @@ class Skyline(Layout):
         if generator is not None:
             lengths = [int(generator.integers(1, length + 1)) for length in lengths]
         return {"n": n, DIAGONAL: self.places(lengths)}
+
+    def sizes_of_matrix(self, matrix: npt.NDArray[Any]) -> dict[str, Any]:
+        n = matrix.shape[0]
+        lengths = []
+        for k in range(n):
+            strip = matrix[:, k] if self.order == "column-major" else matrix[k]
+            stored = np.flatnonzero(strip)
+            far = [i for i in stored if (i >= k) == self.tail]
+            lengths.append(1 + max((abs(int(i) - k) for i in far), default=0))
+        return {DIAGONAL: self.places(lengths)}
+
+    def argument_problems(self, sizes: Mapping[str, Any]) -> Iterator[str]:
+        n, places = sizes["n"], sizes[DIAGONAL]
+        needed = n + 1 if self.tail and n else n
+        if not isinstance(places, np.ndarray) or places.dtype != np.intp or places.ndim != 1:
+            yield "diagonal must be a one-dimensional array of numpy.intp"
+        elif not places.flags.c_contiguous or not places.flags.aligned or places.size < needed:
+            yield f"diagonal must hold {needed} contiguous places"
+        elif n:
+            steps = np.diff(places[:needed])
+            limit = np.arange(n, 0, -1) if self.tail else np.arange(2, n + 1)
+            if places[0] != 0 or np.any(steps < 1) or np.any(steps > limit):
+                yield "diagonal must begin with 0 and ascend, each strip within its triangle"
 
     def places(self, lengths: list[int]) -> np.ndarray[Any, np.dtype[np.intp]]:
         """The array of the diagonal's places for strips of these lengths (elements)."""

@@ -314,7 +314,7 @@ def factor_text(value: Scalar, name: str) -> str:
     """A scalar as the left factor of a formula; nothing if it is 1."""
     if value == RUNTIME:
         return f"{name}*"
-    return {1: "", -1: "-"}.get(value, f"{value}*")  # type: ignore[call-overload,no-any-return]
+    return "" if value == 1 else "-" if value == -1 else f"{value}*"
 
 
 def scaled(c: Context, factor: Number, number: Number) -> Number:

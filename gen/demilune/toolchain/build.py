@@ -8,7 +8,8 @@ from concurrent.futures import ThreadPoolExecutor
 from dataclasses import dataclass, field
 from pathlib import Path
 
-from demilune.errors import DemiluneError, MissingError
+from demilune.errors import CheckError, DemiluneError, MissingError
+from demilune.languages import LANGUAGES
 from demilune.plan.build import Plan
 from demilune.toolchain import cache
 from demilune.toolchain.compilers import Compiler, find_compiler, has_fma, library_flags
@@ -17,9 +18,11 @@ from demilune.toolchain.executables import CExecutable, Executable, PythonExecut
 
 def executable_of(plan: Plan, files: Mapping[str, str]) -> Executable:
     """The routine of ``plan`` from the files that hold it."""
-    if plan.spec.language == "python":
-        return PythonExecutable(plan, files[f"{plan.spec.file}.py"])
-    return CExecutable(plan, compiled(find_compiler(), [plan], files))
+    unit = Unit(plan.spec.file, plan.spec.language, [plan], dict(files))
+    build_units([unit])
+    if unit.error is not None:
+        raise unit.error
+    return unit.executables[0]
 
 
 def flags_for(plans: list[Plan]) -> tuple[str, ...]:
@@ -37,6 +40,17 @@ def flags_for(plans: list[Plan]) -> tuple[str, ...]:
 def compiled(compiler: Compiler, plans: list[Plan], files: Mapping[str, str]) -> Path:
     """The library of some files, compiled or from the cache."""
     return cache.library(compiler, flags_for(plans), files)
+
+
+def _loaded(compiler: Compiler, unit: Unit) -> list[Executable]:
+    library = compiled(compiler, unit.plans, unit.files)
+    try:
+        return [CExecutable(plan, library) for plan in unit.plans]
+    except (OSError, AttributeError) as error:
+        cache.forget(library)
+        raise CheckError(
+            f"{compiler.name} made a library of {unit.file} that cannot be loaded: {error}"
+        ) from error
 
 
 @dataclass
@@ -66,14 +80,17 @@ def build_units(
 
     def make(unit: Unit) -> None:
         try:
-            if unit.language == "python":
+            runs = LANGUAGES[unit.language].runs
+            if runs == "python":
                 source = unit.files[f"{unit.file}.py"]
                 unit.executables = [PythonExecutable(plan, source) for plan in unit.plans]
+            elif runs == "nothing":
+                title = LANGUAGES[unit.language].title
+                unit.error = MissingError(f"sources in {title} are written, not run")
             elif isinstance(compiler, MissingError):
                 unit.error = compiler
             else:
-                library = compiled(compiler, unit.plans, unit.files)
-                unit.executables = [CExecutable(plan, library) for plan in unit.plans]
+                unit.executables = _loaded(compiler, unit)
         except DemiluneError as error:
             unit.error = error
 

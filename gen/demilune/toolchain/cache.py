@@ -7,6 +7,8 @@ used only while the library's own hash is the one written beside it.
 
 from __future__ import annotations
 
+import atexit
+import functools
 import hashlib
 import json
 import os
@@ -17,7 +19,7 @@ from pathlib import Path
 
 import platformdirs
 
-from demilune.errors import InputError
+from demilune.errors import CheckError, InputError
 from demilune.toolchain.compilers import Compiler
 
 LIBRARY, RECORD = "library.so", "record.json"
@@ -38,13 +40,14 @@ def library(compiler: Compiler, flags: Sequence[str], sources: Mapping[str, str]
     """The compiled library of ``sources``, from the cache if it is there and whole."""
     made_from = [compiler.path, compiler.version, list(flags), dict(sorted(sources.items()))]
     entry = digest(json.dumps(made_from).encode())
-    place = _root() / entry
+    place = used_folder() / entry
     if _whole(place):
         return place / LIBRARY
     return _make(place, compiler, flags, sources)
 
 
-def _root() -> Path:
+def used_folder() -> Path:
+    """The cache folder, or one for this process alone where that cannot be written to."""
     root = cache_folder()
     try:
         root.mkdir(parents=True, exist_ok=True)
@@ -52,12 +55,23 @@ def _root() -> Path:
             return root
     except OSError:
         pass
-    root = Path(tempfile.gettempdir()) / f"demilune-{os.getuid() if hasattr(os, 'getuid') else 0}"
+    return _own_folder()
+
+
+@functools.cache
+def _own_folder() -> Path:
+    # A folder that others could write to would let them plant libraries: take a new one.
     try:
-        root.mkdir(mode=0o700, parents=True, exist_ok=True)
+        folder = tempfile.mkdtemp(prefix="demilune-")
     except OSError as error:
-        raise InputError(f"no folder for compiled libraries: {root}: {error.strerror}") from error
-    return root
+        raise InputError(f"no folder for compiled libraries: {error.strerror}") from error
+    atexit.register(shutil.rmtree, folder, ignore_errors=True)
+    return Path(folder)
+
+
+def forget(library: Path) -> None:
+    """Removes the entry of a library."""
+    shutil.rmtree(library.parent, ignore_errors=True)
 
 
 def _whole(place: Path) -> bool:
@@ -79,6 +93,8 @@ def _make(
                 (folder / name).write_text(text, encoding="utf-8")
             inputs = sorted(name for name in sources if name.endswith(".c"))
             compiler.run([*flags, "-o", LIBRARY, *inputs, "-lm"], folder)
+            if not (folder / LIBRARY).is_file():
+                raise CheckError(f"{compiler.name} ended well and wrote no library")
             made = digest((folder / LIBRARY).read_bytes())
             (folder / RECORD).write_text(json.dumps({"sha256": made}), encoding="utf-8")
             _put(folder, place)

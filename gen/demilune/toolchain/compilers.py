@@ -39,7 +39,7 @@ class Compiler:
         try:
             done = subprocess.run(
                 [self.path, *arguments], cwd=folder, capture_output=True, text=True,
-                timeout=seconds, check=False, stdin=subprocess.DEVNULL,
+                errors="replace", timeout=seconds, check=False, stdin=subprocess.DEVNULL,
             )  # fmt: skip
         except FileNotFoundError as error:
             raise MissingError(f"compiler {self.path} is not there; {HOW_TO_GET}") from error
@@ -55,29 +55,37 @@ class Compiler:
             raise CheckError(f"{self.name} failed (exit {done.returncode}): " + "; ".join(errors))
 
 
+USUAL = ("gcc", "clang")
+"""The compilers that are looked for by these names."""
+
+
 def find_compiler() -> Compiler:
     """The compiler named by CC, else gcc, clang or cc; raises :class:`MissingError`."""
     named = os.environ.get("CC")
-    for name in [named] if named else ["gcc", "clang", "cc"]:
-        path = shutil.which(name)
-        if path is not None:
-            return _described(path)
-    missing = f"compiler {named} (from CC) is not there" if named else "no C compiler was found"
-    raise MissingError(f"{missing}; {HOW_TO_GET}")
+    if named:
+        return describe_compiler(named)
+    for name in (*USUAL, "cc"):
+        if shutil.which(name) is not None:
+            return describe_compiler(name)
+    raise MissingError(f"no C compiler was found; {HOW_TO_GET}")
 
 
-def all_compilers() -> list[Compiler]:
-    """Every C compiler that is found under its usual names, and the one that CC names."""
-    paths = [shutil.which(name) for name in (os.environ.get("CC") or "gcc", "gcc", "clang")]
-    return [_described(path) for path in dict.fromkeys(paths) if path is not None]
+def describe_compiler(name: str) -> Compiler:
+    """The compiler called ``name``; raises :class:`MissingError` if it is not there."""
+    path = shutil.which(name)
+    if path is None:
+        from_cc = " (from CC, which names a program without flags)"
+        of = from_cc if os.environ.get("CC") == name else ""
+        raise MissingError(f"compiler {name}{of} is not there; {HOW_TO_GET}")
+    return _described(path)
 
 
 @cache
 def _described(path: str) -> Compiler:
     try:
         said = subprocess.run(
-            [path, "--version"], capture_output=True, text=True, timeout=60, check=False,
-            stdin=subprocess.DEVNULL,
+            [path, "--version"], capture_output=True, text=True, errors="replace",
+            timeout=60, check=False, stdin=subprocess.DEVNULL,
         ).stdout  # fmt: skip
     except (OSError, subprocess.SubprocessError) as error:
         raise MissingError(f"compiler {path} cannot be run; {HOW_TO_GET}") from error
