@@ -138,7 +138,15 @@ def conjugate(number: Number) -> Number:
 
 
 def convert(number: Number, real: str) -> Number:
-    return tuple(part if part.type == real else Convert(part, real) for part in number)
+    return tuple(_converted(part, real) for part in number)
+
+
+def _converted(value: Value, real: str) -> Value:
+    if value.type == real:
+        return value
+    if isinstance(value, Constant) and REALS[value.type].wider == real:
+        return Constant(value.value, real)  # exact, so that what is known stays known
+    return Convert(value, real)
 
 
 def real_terms(left: Number, right: Number, part: int) -> Iterator[tuple[str, Value, Value]]:

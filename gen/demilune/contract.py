@@ -131,11 +131,11 @@ def _argument(plan: Plan, one: Parameter, language: Language) -> str:
     use = {"in": "read", "out": "written", "inout": "read and written", "scratch": "written"}
     count = extent_text(one.extent)
     if one.kind == "places":
-        return f"{one.meaning}; {count} integers, read"
+        return f"{one.meaning}; {counted(count, 'integer')}, read"
     kind = f"complex, pairs of {one.type}" if one.complex else one.type
     if one.complex and language.complex_elements:
         kind = f"complex, parts rounded to {one.type}" if one.type == "float32" else "complex"
-    return f"{one.meaning}; {count} elements ({kind}), {use[one.use]}"
+    return f"{one.meaning}; {counted(count, 'element')} ({kind}), {use[one.use]}"
 
 
 def extent_text(extent: Expr) -> str:
@@ -171,43 +171,48 @@ def _range(plan: Plan) -> list[str]:
     return lines
 
 
-def sample_sizes(plan: Plan) -> list[int]:
-    """Sizes at which the costs of a routine with any n are stated."""
-    return [4, 16, 64]
-
-
 def costs(plan: Plan) -> list[str]:
     """Counts of operations, loads and stores, exact for the sizes they name."""
     spec = plan.spec
+    assumed = [spec.layout.assumes] if spec.layout.assumes else []
+    scalars = [one.name for one in plan.parameters if one.kind == "scalar"]
+    if scalars:
+        assumed.append(f"{' and '.join(scalars)} other than 0 and 1")
+    start = f"With {' and '.join(assumed)}: " if assumed else ""
     if spec.layout.n != RUNTIME:
-        record = flat(plan, spec.layout.sample(int(spec.layout.n)))
-        lines = [_cost_line(record)]
-        lines.append(f"The product alone is 2n^2 = {2 * int(spec.layout.n) ** 2}.") if (
-            spec.operation.result == "y" and not spec.arithmetic.type.complex
-        ) else None
+        n = int(spec.layout.n)
+        lines = [start + _cost_line(flat(plan, spec.layout.sample(n)))]
+        real = not spec.arithmetic.type.complex
+        if spec.operation.result == "y" and real and spec.layout.whole:
+            lines.append(f"The product alone is 2n^2 = {2 * n * n}.")
         return lines
-    step = spec.schedule.block
-    tile = spec.layout.period
+    step, tile = spec.schedule.block, spec.layout.period
     unit = step * tile if step > 1 and tile % step else max(step, tile)
-    assumed = f"With {spec.layout.assumes}: " if spec.layout.assumes else ""
-    points = {n: flat(plan, spec.layout.sample(n)) for n in (unit * k for k in (2, 4, 6, 8, 10))}
+    points = {n: flat(plan, spec.layout.sample(n)) for n in (unit * k for k in (2, 3, 4, 5, 7, 8))}
     names = [name for name in next(iter(points.values())) if name != "bytes of locals"]
     formulas = {
         name: polynomial({n: record[name] for n, record in points.items()}) for name in names
     }
     if any(formula is None for formula in formulas.values()):
-        return [f"{assumed}n = {n}: {_cost_line(record)}" for n, record in list(points.items())[:3]]
+        return [f"{start}n = {n}: {_cost_line(record)}" for n, record in list(points.items())[:3]]
     texts = {name: _polynomial_text(formula) for name, formula in formulas.items() if formula}
     when = f" (n a multiple of {unit})" if unit > 1 else ""
-    return [f"{assumed}{_cost_line(texts)}{when}"]
+    return [f"{start}{_cost_line(texts)}{when}"]
+
+
+def counted(count: Any, what: str) -> str:
+    """A count with its noun, which is in the plural unless the count is 1."""
+    first, *rest = what.split(" ", 1)
+    noun = first if str(count) == "1" else f"{first}s"
+    return " ".join([str(count), noun, *rest])
 
 
 def _cost_line(record: dict[str, Any]) -> str:
-    parts = [f"{record['flops']} operations"]
-    loads = [k for k, v in record.items() if k.startswith("loads of") and v not in (0, "0")]
-    stores = [k for k, v in record.items() if k.startswith("stores of") and v not in (0, "0")]
-    parts += [f"{record[k]} loads of {k.split()[-1]}" for k in loads]
-    parts += [f"{record[k]} stores of {k.split()[-1]}" for k in stores]
+    parts = [counted(record["flops"], "operation")]
+    for kind in ("load", "store"):
+        for key, value in record.items():
+            if key.startswith(f"{kind}s of ") and value not in (0, "0"):
+                parts.append(counted(value, f"{kind} of {key.split()[-1]}"))
     return ", ".join(parts) + "."
 
 

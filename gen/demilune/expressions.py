@@ -156,7 +156,7 @@ class ExpressionWriter:
         if isinstance(atom, Symbol):
             return atom.name
         if isinstance(atom, Quotient):
-            factors = [_grouped(self.integer(factor), "+-") for factor in atom.factors]
+            factors = [_grouped(self.integer(factor), "+-/") for factor in atom.factors]
             return s["quotient"](" * ".join(factors), atom.divisor)
         if isinstance(atom, Extreme):
             name = "least" if atom.least else "greatest"

@@ -26,7 +26,9 @@ def _single(value):
 
 def _exact(a, b, c):
     """a * b + c for finite a, b and c as a quotient of whole numbers."""
-    (p, q), (r, s), (t, u) = a.as_integer_ratio(), b.as_integer_ratio(), c.as_integer_ratio()
+    p, q = a.as_integer_ratio()
+    r, s = b.as_integer_ratio()
+    t, u = c.as_integer_ratio()
     return p * r * u + t * q * s, q * s * u
 
 

@@ -90,6 +90,7 @@ class _Renderer(ExpressionWriter):
             "sizes": REAL_SIZE,
             "floating": any(name.startswith("float") for name in types),
             "fma": sorted(need[4:] for need in self.needs if need.startswith("fma_")),
+            "complex": any(plan.spec.arithmetic.type.complex for plan in self.plans),
             "freestanding": self.freestanding,
             "helpers": self._helpers(),
         }

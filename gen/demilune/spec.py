@@ -28,6 +28,8 @@ LAYOUT = Key("where the half lies", words=tuple(LAYOUTS))
 DEFAULTS = {"operation": "matvec", "layout": "full"}
 DECISIVE = {"operation", "layout", "dtype", "n"}
 """Keys on which so much depends that nothing else can be told while they are wrong."""
+INTEGER_ACCUMULATOR = "wide"
+"""The accumulator of integers where none is named: the element type holds few sums."""
 LONGEST_NAME = 63
 """C99 (5.2.4.1) promises as many significant characters for internal names."""
 
@@ -62,6 +64,8 @@ class Spec:
     def stated(self) -> dict[str, Any]:
         """The values that differ from the defaults, and the four that are always said."""
         default = {key: value for c in self.choices for key, value in defaults_of(type(c)).items()}
+        if self.arithmetic.type.integer:
+            default["accumulator"] = INTEGER_ACCUMULATOR
         always = ("operation", "layout", "n", "dtype", "loop")
         return {
             name: value
@@ -187,7 +191,7 @@ def make_spec(name: str, **values: Any) -> Spec:
     if values.get("loop") is None:
         values["loop"] = operation.loops()[0]
     if values.get("accumulator") is None and values.get("dtype", "").startswith("int"):
-        values["accumulator"] = "wide"
+        values["accumulator"] = INTEGER_ACCUMULATOR
     spec = Spec(
         name,
         pick(operation, values),

@@ -22,6 +22,7 @@ class Band(Layout):
     """kd off-diagonals and the diagonal; the corners of the array are never touched."""
 
     name: ClassVar[str] = "band"
+    whole: ClassVar[bool] = False
     rank: ClassVar[int] = 3
     summary: ClassVar[str] = "kd off-diagonals and the diagonal, ld >= kd + 1 elements a strip"
     source: ClassVar[str] = "LAPACK Users' Guide, 3rd ed. (1999), Band Storage"

@@ -137,6 +137,8 @@ class Layout:
     source: ClassVar[str]
     """The published source of the storage scheme."""
     orders: ClassVar[tuple[str, ...]] = ("column-major", "row-major")
+    whole: ClassVar[bool] = True
+    """Whether every element of the triangle is stored."""
     grouped: ClassVar[bool] = False
     """Whether strips come in groups of ``period``, which a block of strips cannot leave."""
 

@@ -25,6 +25,7 @@ class Skyline(Layout):
     """
 
     name: ClassVar[str] = "skyline"
+    whole: ClassVar[bool] = False
     rank: ClassVar[int] = 6
     summary: ClassVar[str] = "a profile: strips of any length and the places of the diagonal"
     source: ClassVar[str] = (

@@ -152,7 +152,9 @@ class _Counter:
             total.add(self._counted(one))
 
     def _holds(self, condition: Compare | Equals, env: Mapping[str, Any]) -> bool:
-        return isinstance(condition, Compare) and condition.holds(env)
+        if isinstance(condition, Compare):
+            return condition.holds(env)
+        return condition.negated  # a scalar that is passed counts as neither 0 nor 1
 
     def _loop(self, one: For, env: dict[str, Any], total: Counts) -> None:
         low, high = one.low.value(env), one.high.value(env)

@@ -17,6 +17,7 @@ from demilune.plan.tree import (
     Comment,
     Condition,
     Constant,
+    Convert,
     Declare,
     Equals,
     Finish,
@@ -193,6 +194,8 @@ class Writer:
         otherwise: Callable[[], None] = lambda: None,
     ) -> None:
         """``then`` where the scalar equals the real number ``to``; decided now if constant."""
+        # Whether a number is 0 or 1 can be told before it is made wider.
+        number = tuple(one.operand if isinstance(one, Convert) else one for one in number)
         first = number[0]
         if len(number) == 1 and isinstance(first, Constant):
             (then if first.value == to else otherwise)()
