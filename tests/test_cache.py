@@ -315,7 +315,6 @@ def test_where_nothing_is_writable_the_message_says_so(tmp_path, monkeypatch, co
     assert str(tmp_path / "file") in str(caught.value)
 
 
-@pytest.mark.xfail(strict=True, reason="a temporary folder that others may write to is trusted")
 def test_a_temporary_folder_that_others_may_write_to_is_not_used(
     tmp_path, spare, counting, monkeypatch
 ):
@@ -330,7 +329,6 @@ def test_a_temporary_folder_that_others_may_write_to_is_not_used(
     assert planted not in library.parents
 
 
-@pytest.mark.xfail(strict=True, reason="targets shows the folder that was asked for, not the used")
 def test_targets_tells_the_folder_that_is_used(tmp_path, spare, monkeypatch):
     monkeypatch.setenv("DEMILUNE_CACHE", str(below_a_file(tmp_path)))
     rows = json.loads(invoke("targets", "--json").stdout)

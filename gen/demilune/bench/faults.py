@@ -11,6 +11,7 @@ from collections.abc import Callable
 from dataclasses import dataclass, replace
 
 from demilune.index import Compare, Expr, choice, expr, symbol
+from demilune.layouts import Piece
 from demilune.plan.build import Plan, make_plan
 from demilune.plan.rewrite import Rewriter, Statements
 from demilune.plan.tree import (
@@ -562,8 +563,13 @@ def write_before_the_start(plan: Plan) -> Plan:
 
 @fault("the place behind the array is overwritten and restored at the end", ("untouched",))
 def write_that_restores(plan: Plan) -> Plan:
+    size = plan.spec.layout.size
+    return _restoring(plan, _unused_place(plan), Compare(expr(0), "<", size))
+
+
+def _restoring(plan: Plan, place: Expr, when: Compare) -> Plan:
+    """The plan with a place of ``a`` overwritten at first and restored at last."""
     array = plan.arrays["a"]
-    place = _unused_place(plan)
     parts = [part if array.complex else None for part in range(array.parts)]
     names = [f"saved{part or 0}" for part in parts]
     saved = tuple(
@@ -572,14 +578,23 @@ def write_that_restores(plan: Plan) -> Plan:
     )
     first = Store("a", place, _zeros(array), array.type)
     last = Store("a", place, tuple(Local(name, array.type) for name in names), array.type)
-    changed = _at_end(plan, last)
+    changed = _at_end(plan, last)  # makes the array writable
     rejects = [one for one in plan.routine.body if isinstance(one, Reject)]
     rest = plan.routine.body[len(rejects) :]
     body: Statements = (*saved, first, *rest, last)
-    size = plan.spec.layout.size
-    if size.constant is None:
-        body = (If(Compare(expr(0), "<", size), body),)
+    if when.known is None:
+        body = (If(when, body),)
     return replace(changed, routine=replace(changed.routine, body=(*rejects, *body)))
+
+
+@fault("the other half is overwritten and restored at the end", ("untouched",))
+def other_half_restored(plan: Plan) -> Plan:
+    layout = plan.spec.layout
+    strip = [one for one in layout.groups()[0].own if isinstance(one, Piece)]
+    if layout.name != "full" or not isinstance(layout.n, str):
+        return plan
+    k, m = (expr(1), expr(0)) if layout.tail else (expr(0), expr(1))
+    return _restoring(plan, strip[0].place(k, m), Compare(expr(1), "<", layout.size))
 
 
 @fault("x is changed", ("exact", "faithful", "untouched", "calling"))

@@ -1,69 +1,78 @@
-"""Guard pages: arrays that end, or begin, where the memory of the process does.
+"""Whether a kernel touches what it may not: watched accesses, or guard pages.
 
-Each array is placed directly before, then directly after a page that may not be touched, in a
-child process: a read or write outside ends the child with a signal.
+Each array is placed so that it ends, then so that it begins, at the edge of memory that may not
+be touched, in a child process: a read or write outside is recorded, or ends the child.
 """
 
 from __future__ import annotations
 
 import mmap
 import os
-import signal
 import sys
 from collections.abc import Iterator
+from functools import partial
 from typing import Any
 
 import cffi
 import numpy as np
 
+from demilune.bench import isolation, watch
 from demilune.bench.problem import PAD, Lanes, Problem
 from demilune.bench.run import arguments_of, flat
 from demilune.toolchain.executables import Executable
 
 AVAILABLE = hasattr(os, "fork") and sys.platform.startswith("linux")
+SECONDS = 120
 WHY_NOT = "this system has no fork and mprotect as Linux has them"
 
 
 def outside_touched(executable: Executable, problems: list[Problem]) -> Iterator[str]:
-    """Runs the first case of each problem between guard pages; tells what went wrong."""
-    sys.stdout.flush()
-    sys.stderr.flush()
-    reading, writing = os.pipe()
-    child = os.fork()
-    if child == 0:  # pragma: no cover - measured in the parent only
-        try:
-            os.close(reading)
-            signal.signal(signal.SIGINT, signal.SIG_DFL)
-            _child(executable, problems, writing)
-        finally:
-            os._exit(0)
-    os.close(writing)
-    with os.fdopen(reading, encoding="utf-8") as pipe:
-        said = pipe.read().splitlines()
-    _, status = os.waitpid(child, 0)
-    if os.WIFSIGNALED(status):
-        where = said[-1] if said else "before the first call"
-        yield f"touched memory outside an array (signal {os.WTERMSIG(status)}): {where}"
+    """Runs the first case of each problem in a child; tells what was touched that may not be.
+
+    Every access is watched where that can be done; elsewhere guard pages lie around each array.
+    """
+    work = _watched if watch.watcher() is not None else _guarded
+    try:
+        yield from isolation.results(work(executable, problems), SECONDS)
+    except isolation.Ended as ended:
+        yield f"touched memory outside every array: the kernel {ended}"
 
 
-def _child(executable: Executable, problems: list[Problem], pipe: int) -> None:
+def _watched(executable: Executable, problems: list[Problem]) -> Iterator[str]:
+    for problem in problems:
+        for at_end in (True, False):
+            regions = {
+                name: watch.Region(flat(one, problem.buffers[name], 0)[PAD:-PAD], at_end)
+                for name, one in problem.plan.arrays.items()
+            }
+            arrays = {name: region.array for name, region in regions.items()}
+            call = partial(executable, arguments_of(problem, arrays))
+            record, count = watch.accesses(list(regions.values()), call)
+            if count > len(record):
+                yield f"{problem.setting}: more accesses than can be recorded ({count})"
+            yield from watch.violations(problem, regions, record, never_read)
+
+
+def _guarded(executable: Executable, problems: list[Problem]) -> Iterator[str]:
     for problem in problems:
         for at_end in (True, False):
             arrays = {}
             for name, one in problem.plan.arrays.items():
-                whole = flat(one, problem.buffers[name], 0)
-                arrays[name] = guarded(whole[PAD:-PAD], at_end)
-            side = "after" if at_end else "before"
-            os.write(pipe, f"{problem.setting}: guard page {side} each array\n".encode())
+                content = flat(one, problem.buffers[name], 0)[PAD:-PAD]
+                arrays[name] = guarded(content, at_end, closed=never_read(problem, name))
             executable(arguments_of(problem, arrays))
+    yield from ()
 
 
 _ffi = cffi.FFI()
 _ffi.cdef("int mprotect(void *, size_t, int);")
 
 
-def guarded(content: Lanes, at_end: bool) -> Any:
-    """A copy of ``content`` that ends directly before, or begins directly after, a guard page."""
+def guarded(content: Lanes, at_end: bool, closed: bool = False) -> Any:
+    """A copy of ``content`` that ends directly before, or begins directly after, a guard page.
+
+    ``closed`` makes its own pages inaccessible too, for an array that must not be touched.
+    """
     page, size = mmap.PAGESIZE, content.nbytes
     whole = -(-max(size, 1) // page) * page
     memory = mmap.mmap(-1, whole + page)
@@ -72,7 +81,8 @@ def guarded(content: Lanes, at_end: bool) -> Any:
     offset = whole - size if at_end else page
     start[offset : offset + size] = content.view(np.uint8)
     address = start.__array_interface__["data"][0]
-    if _ffi.dlopen(None).mprotect(_ffi.cast("void *", address + guard), page, 0) != 0:
+    first, length = (address, whole + page) if closed else (address + guard, page)
+    if _ffi.dlopen(None).mprotect(_ffi.cast("void *", first), length, 0) != 0:
         raise OSError("mprotect failed")
     return start[offset : offset + size].view(content.dtype)
 
@@ -106,7 +116,7 @@ def unused_touched(executable: Executable, problems: list[Problem]) -> Iterator[
                 for masks in (problem.scratch, problem.readable, problem.writable)
             )
             writable = writable | scratch
-            if _never_read(problem, name):
+            if never_read(problem, name):
                 readable = readable & False
             arrays[name] = Watched(
                 flat(one, problem.buffers[name], 0)[PAD:-PAD].copy(),
@@ -121,7 +131,7 @@ def unused_touched(executable: Executable, problems: list[Problem]) -> Iterator[
             yield f"{problem.setting}: raised {type(error).__name__}: {error}"
 
 
-def _never_read(problem: Problem, name: str) -> bool:
+def never_read(problem: Problem, name: str) -> bool:
     """Whether the contract promises that the array is not read with these scalars."""
     scalars = problem.setting.scalars
     if name == "y":

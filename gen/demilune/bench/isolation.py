@@ -32,8 +32,7 @@ def results(work: Iterable[T], seconds: float) -> Iterator[T]:
     if child == 0:  # pragma: no cover - measured in the parent only
         _child(work, reading, writing)
     os.close(writing)
-    status: int | None = None
-    done = False
+    state = "running"
     deadline = time.monotonic() + seconds
     try:
         with os.fdopen(reading, "rb") as pipe:
@@ -43,27 +42,31 @@ def results(work: Iterable[T], seconds: float) -> Iterator[T]:
                 elif kind == "error":
                     raise value
                 else:
-                    done = True
+                    state = kind  # done, gone or late
     finally:
-        if not done:
-            os.kill(child, signal.SIGKILL) if time.monotonic() >= deadline else None
+        if state in ("running", "late"):  # nobody waits for the rest of it
+            os.kill(child, signal.SIGKILL)
         _, status = os.waitpid(child, 0)
-    if not done:
-        if time.monotonic() >= deadline:
-            raise Ended(f"did not end within {seconds:.0f} s")
+    if state == "late":
+        raise Ended(f"did not end within {seconds:.0f} s")
+    if state == "gone":
         name = signal.Signals(os.WTERMSIG(status)).name if os.WIFSIGNALED(status) else "exit"
         raise Ended(f"ended the process ({name})")
 
 
 def _messages(pipe: BinaryIO, deadline: float) -> Iterator[tuple[str, Any]]:
-    while True:
+    kind = "result"
+    while kind == "result":
         ready, _, _ = select.select([pipe], [], [], max(0.0, deadline - time.monotonic()))
         if not ready:
+            yield "late", None
             return
         try:
-            yield pickle.load(pipe)  # noqa: S301 - from our own child
+            kind, value = pickle.load(pipe)  # noqa: S301 - from our own child
         except (EOFError, pickle.UnpicklingError):
+            yield "gone", None
             return
+        yield kind, value
 
 
 def _child(work: Iterable[T], reading: int, writing: int) -> None:  # pragma: no cover

@@ -2,8 +2,9 @@
 
 from __future__ import annotations
 
+import hashlib
 import time
-from collections.abc import Callable, Iterator
+from collections.abc import Callable, Collection, Iterator
 from dataclasses import asdict, dataclass, field, replace
 from typing import Any
 
@@ -25,6 +26,8 @@ from demilune.bench.problem import (
     lattice,
     make_problem,
     sizes_to_try,
+    structured,
+    structures,
     uniform,
 )
 from demilune.bench.reference import errors, numpy_product
@@ -94,23 +97,28 @@ class Verdict:
         }  # fmt: skip
 
 
-def verify(plan: Plan, executable: Executable, seed: int = 1) -> Verdict:
-    """Runs all levels on a kernel; the same seed gives the same inputs."""
+def verify(
+    plan: Plan, executable: Executable, seed: int = 1, until: Collection[str] = ()
+) -> Verdict:
+    """Runs all levels on a kernel; the same seed gives the same inputs.
+
+    Ends early when one of the levels in ``until`` fails.
+    """
     start = time.perf_counter()
     if isinstance(executable, CExecutable) and isolation.AVAILABLE:
-        levels = _isolated(plan, executable, seed)
+        levels = _isolated(plan, executable, seed, until)
     else:
-        levels = list(_levels(plan, executable, seed))
+        levels = list(_levels(plan, executable, seed, until))
     verdict = Verdict(plan.spec.name, plan.spec.language, seed, levels)
     verdict.seconds = time.perf_counter() - start
     return verdict
 
 
-def _isolated(plan: Plan, executable: Executable, seed: int) -> list[Level]:
+def _isolated(plan: Plan, executable: Executable, seed: int, until: Collection[str]) -> list[Level]:
     """All levels in a child process, so that a kernel that crashes takes nothing with it."""
     levels: list[Level] = []
     try:
-        for level in isolation.results(_levels(plan, executable, seed), SECONDS):
+        for level in isolation.results(_levels(plan, executable, seed, until), SECONDS):
             levels.append(level)
     except Exception as ended:
         broken = Level(LEVELS[len(levels)])
@@ -125,15 +133,22 @@ def _isolated(plan: Plan, executable: Executable, seed: int) -> list[Level]:
     return levels
 
 
-def _levels(plan: Plan, executable: Executable, seed: int) -> Iterator[Level]:
+def _levels(
+    plan: Plan, executable: Executable, seed: int, until: Collection[str]
+) -> Iterator[Level]:
     bench = _Bench(plan, executable, seed)
     checks: tuple[Callable[[Level], None], ...] = (
         bench.exact, bench.faithful, bench.bound, bench.untouched, bench.calling,
     )  # fmt: skip
     for name, check in zip(LEVELS, checks, strict=True):
         level = Level(name)
+        bench.digest = hashlib.sha256()
         check(level)
+        if level.cases:
+            level.facts["results"] = bench.digest.hexdigest()
         yield level
+        if level.failed and name in until:
+            return
 
 
 class _Bench:
@@ -142,6 +157,7 @@ class _Bench:
         self.spec = plan.spec
         self.evaluator = Evaluator(plan)
         self.sizes = sizes_to_try(plan)
+        self.digest = hashlib.sha256()
         self.fast = isinstance(executable, CExecutable)
         self.large = max(self.sizes) > 64
 
@@ -170,10 +186,16 @@ class _Bench:
         """The buffers after one case, or None if the kernel raised an exception."""
         level.cases += 1
         try:
-            return run_case(self.executable, problem, lane)
+            found = run_case(self.executable, problem, lane)
         except Exception as error:
             level.fail(f"{problem.setting}: raised {type(error).__name__}: {error}")
             return None
+        for name in sorted(found):
+            results = found[name][problem.writable[name]]
+            if results.dtype.kind == "f":  # the bits of a NaN differ between processors
+                results[np.isnan(results)] = np.nan
+            self.digest.update(results.astype(results.dtype.newbyteorder("<")).tobytes())
+        return found
 
     # --- 1 ---------------------------------------------------------------------------------
 
@@ -196,6 +218,17 @@ class _Bench:
 
         lanes = 1 if self.large else 3 if self.fast else 2
         for problem in self._problems("exact", draw, EXACT_SCALARS, lanes):
+            self._compare(level, problem, numpy_product(problem), by_value=True)
+        self._structured(level)
+
+    def _structured(self, level: Level) -> None:
+        """Matrices whose structure shows what random ones hide."""
+        generator = np.random.default_rng([self.seed, 7])
+        runtime = self.spec.layout.n == RUNTIME
+        for n in (2, 5) if runtime else self.sizes[:1]:
+            kinds = structures(n)
+            setting = draw_setting(self.plan, n, generator, EXACT_SCALARS)
+            problem = make_problem(self.plan, setting, structured(kinds), generator, len(kinds))
             self._compare(level, problem, numpy_product(problem), by_value=True)
 
     def _largest(self, n: int, scalars: dict[str, int]) -> int:

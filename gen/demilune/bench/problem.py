@@ -219,6 +219,41 @@ def lattice(largest: int, exponent: int = 0) -> Draw:
     return draw
 
 
+MOST_STRUCTURES = 20
+
+
+def structures(n: int) -> list[str | tuple[int, int]]:
+    """Kinds of matrices whose structure shows faults; a pair is the place of a lone element."""
+    pairs: list[str | tuple[int, int]] = [(i, j) for j in range(n) for i in range(j + 1)]
+    step = max(1, -(-len(pairs) // MOST_STRUCTURES))
+    return ["identity", "signs", "equal", "graded", *pairs[::step]]
+
+
+def structured(kinds: list[str | tuple[int, int]]) -> Draw:
+    """One lane for each kind of matrix, with small whole vectors."""
+
+    def draw(generator: np.random.Generator, shape: tuple[int, ...], name: str) -> Lanes:
+        if name != "A":
+            return lattice(7)(generator, shape, name)
+        n, values = shape[0], np.zeros(shape)
+        i, j = np.arange(n)[:, None], np.arange(n)[None, :]
+        for lane, kind in enumerate(kinds):
+            if isinstance(kind, tuple):
+                values[kind[0], kind[1], :, lane] = np.arange(1, shape[2] + 1)
+                continue
+            whole = {
+                "identity": i == j,
+                "signs": (-1) ** i * (i + j == n - 1),  # a permutation with signs
+                "equal": 0 * i + 0 * j + 2,
+                "graded": 1 + (i + j) % 3,
+            }[kind]
+            values[:, :, 0, lane] = whole
+            values[:, :, -1, lane] = whole
+        return values
+
+    return draw
+
+
 def uniform(generator: np.random.Generator, shape: tuple[int, ...], name: str) -> Lanes:
     """Numbers of magnitude 1/8 to 1: no error bound is disturbed by underflow."""
     signs = generator.choice([-1.0, 1.0], size=shape)

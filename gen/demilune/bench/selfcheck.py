@@ -18,7 +18,7 @@ class Trial:
 
     fault: Fault
     caught_by: tuple[str, ...]
-    """The levels that failed."""
+    """The levels that failed, to the first that should."""
     message: str
     """The first failure that a level which should catch it reported."""
 
@@ -58,7 +58,8 @@ def selfcheck(
     trials = []
     for done, ((fault, _), executable) in enumerate(zip(planted, unit.executables, strict=True)):
         progress(f"planting {fault.name}", done, len(planted))
-        failed = [level for level in verify(plan, executable, seed).levels if level.failed]
+        verdict = verify(plan, executable, seed, until=fault.levels)
+        failed = [level for level in verdict.levels if level.failed]
         wanted = [level for level in failed if level.name in fault.levels] or failed
         message = wanted[0].failures[0] if wanted else ""
         trials.append(Trial(fault, tuple(level.name for level in failed), message))
