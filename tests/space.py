@@ -27,10 +27,6 @@ STRIDES = ("runtime", 1, 2, -1, -3)
 SIZES = ("runtime", "runtime", 1, 2, 3, 4, 5, 6, 7, 8, 12, 13)
 
 
-class Infeasible(Exception):
-    """The values that were asked for do not go together."""
-
-
 def draw(choose: Choose) -> dict[str, Any]:
     """One specification, value by value; each value is chosen from those that can still be."""
     v: dict[str, Any] = {}
@@ -59,7 +55,7 @@ def draw(choose: Choose) -> dict[str, Any]:
         kd = take("kd", ("runtime", *(w for w in widths if n == "runtime" or w < n)))
     if layout in ("full", "band"):
         leading: list[Any] = [None, "runtime"]
-        if layout == "full" and n != "runtime" or layout == "band" and kd != "runtime":
+        if (layout == "full" and n != "runtime") or (layout == "band" and kd != "runtime"):
             leading.append((n if layout == "full" else kd + 1) + 3)
         if take("ld", leading) is None:
             del v["ld"]
@@ -141,7 +137,7 @@ def pairwise() -> tuple[tuple[dict[str, Any], ...], int]:
     return tuple(kept), total
 
 
-# --- building and verifying many at a time -----------------------------------------------------------
+# --- building and verifying many at a time -------------------------------------------------------
 
 
 def verify_all(values: Sequence[dict[str, Any]], optimise: bool = True) -> list[str]:

@@ -148,15 +148,16 @@ class Call:
             raise InputError(f"a has the shape {a.shape}, and n is {n}")
         leading = step // a.itemsize if count > 1 else max(1, rows)
         told = layout.sizes_of_array(rows)
-        if any(one.name == "ld" for one in layout.after()):
-            told["ld"] = leading
-        for name in told.keys() & given.keys():
-            if name == "ld" and whole_number(name, given[name]) != leading:
-                raise InputError(f"ld = {given[name]}, and a has {leading}")
+        ld = whole_number("ld", given.pop("ld", leading))
+        if ld != leading:
+            raise InputError(f"ld = {ld}, and a has {leading}")
         sizes = sizes_for(layout, n, {**told, **given})
-        needed, fixed = layout.rows.value(sizes), layout.leading.value(sizes)
+        needed = layout.rows.value(sizes)
         if rows < needed and n:
             raise InputError(f"a has the shape {a.shape}: {needed} are needed along its strips")
+        if any(one.name == "ld" for one in layout.after()):
+            sizes["ld"] = leading
+        fixed = layout.leading.value(sizes)
         if fixed != leading and count > 1:
             raise InputError(f"a has the leading dimension {leading}; {fixed} is needed")
         self.values |= sizes
@@ -174,7 +175,9 @@ class Call:
             self.values[one.name] = _scalar(one, self.given[one.name])
 
     def _results(self, y: Any) -> None:
-        if "y" in self.known:
+        if "y" in self.known and self.known["y"].use == "in":
+            self._array("y", y)
+        elif "y" in self.known:
             beta = self.values.get("beta", getattr(self.spec.operation, "beta", 0))
             if y is None:
                 if beta != 0:

@@ -30,6 +30,8 @@ class LoopOrder:
     gather: bool
     scatter: bool
     meaning: str
+    remark: str = ""
+    """What the header adds where a strip's elements are not visited in ascending order."""
 
     def visits(self, group: Group, mirrored: bool) -> tuple[Piece | Diagonal, ...]:
         """What of a row is visited, in order; the mirrored pieces only if they matter."""

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import faulthandler
 import os
 import pickle
 import select
@@ -72,6 +73,7 @@ def _messages(pipe: BinaryIO, deadline: float) -> Iterator[tuple[str, Any]]:
 def _child(work: Iterable[T], reading: int, writing: int) -> None:  # pragma: no cover
     try:
         os.close(reading)
+        faulthandler.disable()  # a crash is told by the parent
         signal.signal(signal.SIGINT, signal.SIG_DFL)
         with os.fdopen(writing, "wb", buffering=0) as pipe:
             try:

@@ -58,7 +58,7 @@ def make_plan(spec: Spec) -> Plan:
     return Plan(
         spec,
         Routine(spec.name, parameters, pruned(w.body), functions),
-        (*spec.arithmetic.statement, *sentences),
+        (*spec.arithmetic.statement, *sentences, *([order.remark] if order.remark else [])),
     )
 
 

@@ -15,6 +15,7 @@ from demilune.bench.faults.base import (
     touches_matrix,
     with_body,
 )
+from demilune.index import Compare, expr
 from demilune.plan.build import Plan, make_plan
 from demilune.plan.rewrite import Statements
 from demilune.plan.tree import (
@@ -23,6 +24,7 @@ from demilune.plan.tree import (
     Declare,
     Fma,
     For,
+    If,
     Local,
     Reject,
     Statement,
@@ -107,7 +109,8 @@ def accumulator_not_reset(plan: Plan) -> Plan:
             ]
             if resets:
                 rest = tuple(inner for inner in one.body if inner not in resets)
-                return (*resets, replace(one, body=rest))
+                both: Statements = (*resets, replace(one, body=rest))
+                return (If(Compare(expr(0), "==", expr(0)), both),)  # a block for its names
         return (one,)
 
     if plan.spec.schedule.block > 1:  # two loops over strips would declare the names twice
