@@ -130,6 +130,8 @@ def _argument(plan: Plan, one: Parameter, language: Language) -> str:
     assert one.extent is not None
     use = {"in": "read", "out": "written", "inout": "read and written", "scratch": "written"}
     count = extent_text(one.extent)
+    if one.name == "a" and one.extent.constant is None:
+        count = plan.spec.layout.extent_words or count
     if one.kind == "places":
         return f"{one.meaning}; {counted(count, 'integer')}, read"
     kind = f"complex, pairs of {one.type}" if one.complex else one.type

@@ -166,6 +166,11 @@ class Layout:
         raise NotImplementedError
 
     @property
+    def extent_words(self) -> str:
+        """The extent in the words of ``formula``, where it is too long as an expression."""
+        return ""
+
+    @property
     def integers(self) -> tuple[tuple[str, Expr], ...]:
         """Integers that the indices use, each with its name."""
         return ()

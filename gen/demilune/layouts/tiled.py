@@ -94,6 +94,10 @@ class Tiled(Layout):
         return self.start(last, last, self.width(last)) + self.width(last) * self.width(last)
 
     @property
+    def extent_words(self) -> str:
+        return f"start(t,t) + w(t)^2, with t = (n - 1)/{self.tile} (rounded down),"
+
+    @property
     def period(self) -> int:
         return self.tile
 
