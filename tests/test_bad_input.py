@@ -304,7 +304,7 @@ def test_without_a_compiler_the_python_kernels_are_made(tmp_path, monkeypatch, h
     assert HOW in kernels["c"]["reason"]
     assert "left out: gauge" in result.stdout
     assert HOW in result.stdout
-    assert ("no-such-compiler (from CC) is not there" in result.stdout) == (how == "CC")
+    assert ("no-such-compiler (from CC, which names a program" in result.stdout) == (how == "CC")
     assert (tmp_path / "out" / "gauge.py").is_file()
     assert json.loads((tmp_path / "out" / "evidence.json").read_text())["compiler"] is None
     assert invoke("verify", tmp_path / "gauge.toml").exit_code == 3
@@ -317,7 +317,7 @@ def test_a_compiler_that_is_no_program_is_left_out(tmp_path, monkeypatch):
     broken.chmod(0o755)
     monkeypatch.setenv("CC", str(broken))
     _, kernels = job(tmp_path, 3)
-    assert f"{broken} cannot be run" in kernels["c"]["reason"]
+    assert "broken-cc cannot be run" in kernels["c"]["reason"]
 
 
 def test_a_machine_without_fused_multiply_add(tmp_path, monkeypatch):

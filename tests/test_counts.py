@@ -129,7 +129,7 @@ def program(chosen: Iterable[Plan], includes: list[str], calls: dict[str, str]) 
 def test_memory_is_touched_only_inside_arrays_of_the_stated_sizes(tmp_path):
     calls = {}
     for plan in plans():
-        said = header_of(plan)["Arguments"]
+        said = header_of(plan)
         calls[plan.spec.name] = "".join(
             call_text(plan, one, lambda array, one, said=said: stated_size(said, array, one))
             for one in settings_of(plan, (0, 1, 2, 5, 9), (2, 0, 3, 1))
@@ -204,7 +204,7 @@ def test_integers_of_the_stated_size_cannot_overflow(values, tmp_path):
 
 def test_stated_sizes_are_those_that_are_needed():
     for plan in plans():
-        said = header_of(plan)["Arguments"]
+        said = header_of(plan)
         for arguments in settings_of(plan, tuple(range(20))):
             for one in plan.parameters:
                 if one.extent is not None and (one.kind != "places" or arguments["n"]):

@@ -11,7 +11,7 @@ import sys
 from pathlib import Path
 
 import pytest
-from test_cli import GAUGE, environment, invoke, snapshot
+from test_cli import EVIDENCE, GAUGE, environment, invoke, snapshot
 from tools import need
 
 from demilune import InputError, files
@@ -51,7 +51,7 @@ def test_the_folder_is_made_and_holds_the_files_and_nothing_else(gauge, tmp_path
     assert invoke("emit", gauge, "-o", deep).exit_code == 0
     assert snapshot(deep).keys() == SOURCES
     assert invoke("build", gauge, "-o", deep).exit_code == 0
-    assert snapshot(deep).keys() == SOURCES | {"evidence.json"}
+    assert snapshot(deep).keys() == SOURCES | EVIDENCE
 
 
 def test_the_default_folder_is_build_out(gauge, tmp_path, monkeypatch):
@@ -158,10 +158,11 @@ def test_a_foreign_file_is_left_alone_and_no_other_is_written(gauge, out, name, 
     assert files.MARK.encode() in (out / name).read_bytes()
 
 
-def test_a_foreign_evidence_file_is_left_alone(gauge, out):
+@pytest.mark.parametrize("name", sorted(EVIDENCE))
+def test_a_foreign_evidence_file_is_left_alone(gauge, out, name):
     out.mkdir()
-    (out / "evidence.json").write_text("{}")
-    parts = ["evidence.json", "not written by Demilune"]
+    (out / name).write_text("{}")
+    parts = [name, "not written by Demilune"]
     refused("build", gauge, "-o", out, place=out, parts=parts)
     assert invoke("build", gauge, "-o", out, "--force").exit_code == 0
 
@@ -176,12 +177,13 @@ def test_an_older_file_of_ours_is_replaced(gauge, out):
 
 def test_a_folder_in_the_way_is_left_alone(gauge, out):
     (out / "gauge.h" / "inside").mkdir(parents=True)
-    refused("emit", gauge, "-o", out, place=out, parts=["gauge.h", "not written by Demilune"])
+    refused("emit", gauge, "-o", out, place=out, parts=[str(out / "gauge.h"), "is a folder"])
 
 
 def test_a_folder_in_the_way_is_left_alone_even_with_force(gauge, out):
     (out / "gauge.h" / "inside").mkdir(parents=True)
-    refused("emit", gauge, "-o", out, "--force", place=out, parts=[str(out / "gauge.h")])
+    refused("emit", gauge, "-o", out, "--force", place=out,
+            parts=[str(out / "gauge.h"), "is a folder"])
 
 
 def test_a_link_is_replaced_and_not_what_it_points_to(gauge, out, tmp_path):

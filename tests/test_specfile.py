@@ -157,18 +157,33 @@ def test_a_wrong_value_hides_no_wrong_combination():
     assert found == {"kd", "lop"}
 
 
+def test_a_wrong_value_is_not_told_again_as_a_wrong_combination_or_name():
+    (one,) = problems(kernel(layout="tiled", n=4, tile=0))  # not: the default is too large
+    assert one.key == "tile"
+    (one,) = problems(kernel(n=4, alpha=[1, 10**400]))  # not: the variant's name is too long
+    assert one.key == "alpha"
+
+
 def test_a_wrong_value_hides_no_clash_of_names():
     text = "[kernel.one]\nn=3\n[kernel.ONE]\nn=3\n[kernel.two]\nn=0\n"
     assert {(one.kernel, one.key) for one in problems(text)} >= {("two", "n"), ("ONE", None)}
 
 
 def test_a_wrong_default_is_told_though_no_kernel_takes_it():
-    problems('[defaults]\nkd = "wide"\n[kernel.gauge]\nlayout = "packed"\nn = 3\n')
+    (one,) = problems('[defaults]\nkd = "wide"\n[kernel.gauge]\nlayout = "packed"\nn = 3\n')
+    assert (one.kernel, one.key) == ("[defaults]", "kd")
 
 
 def test_a_wrong_default_is_told_where_it_stands():
     (one,) = problems('[defaults]\nloop = "dott"\n[kernel.one]\nn = 3\n[kernel.two]\nn = 3\n')
-    assert one.kernel == "[defaults]"
+    assert (one.kernel, one.key) == ("[defaults]", "loop")
+    assert 'did you mean "dot"?' in one.message
+
+
+def test_a_wrong_default_hides_no_other_error_and_no_own_value_of_a_kernel():
+    text = '[defaults]\nloop = "dott"\n[kernel.one]\nblock = 0\n[kernel.two]\nloop = "axpi"\n'
+    found = {(one.kernel, one.key) for one in problems(text)}
+    assert found == {("[defaults]", "loop"), ("one", "block"), ("two", "loop")}
 
 
 # --- misspelt keys and values --------------------------------------------------------------------

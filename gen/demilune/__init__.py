@@ -10,8 +10,9 @@ array([5., 6., 7.])
 
 from demilune.bench.levels import Verdict, verify
 from demilune.errors import CheckError, DemiluneError, InputError, MissingError, SpecError
+from demilune.evidence.record import evidence_of
 from demilune.kernel import Kernel, checked, kernel
-from demilune.pipeline import build, check, evidence
+from demilune.pipeline import build, check
 from demilune.plan.build import Plan, make_plan
 from demilune.render import pseudo_code, render
 from demilune.spec import Spec, make_spec
@@ -34,7 +35,7 @@ __all__ = [
     "build",
     "check",
     "checked",
-    "evidence",
+    "evidence_of",
     "expand",
     "kernel",
     "make_plan",

@@ -200,7 +200,7 @@ def make_spec(name: str, **values: Any) -> Spec:
         pick(Arithmetic, values),
         pick(Target, values),
     )
-    problems += [Problem(message, name, key) for key, message in _together(spec)]
+    problems += [Problem(text, name, key) for key, text in _together(spec) if key not in bad]
     if problems:
         raise SpecError(problems)
     return spec

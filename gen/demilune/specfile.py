@@ -71,6 +71,7 @@ def parse(text: str, file: str = "specification") -> tuple[Spec, ...]:
     except (ValueError, RecursionError) as error:  # also what Python limits: digits, nesting
         raise SpecError([Problem(f"not TOML: {error}", file=file)]) from error
     problems = list(_document_problems(document))
+    told = {one.key for one in problems if one.kernel == "[defaults]"}
     kernels = document.get("kernel")
     defaults = document.get("defaults", {})
     specs: list[Spec] = []
@@ -83,9 +84,8 @@ def parse(text: str, file: str = "specification") -> tuple[Spec, ...]:
             try:
                 specs += expand(name, table, defaults)
             except SpecError as error:
-                problems += error.problems
-    if not problems:
-        problems += _clashes(specs)
+                problems += [p for p in error.problems if p.key in table or p.key not in told]
+    problems += _clashes(specs)
     if problems:
         unique = dict.fromkeys(replace(problem, file=file) for problem in problems)
         raise SpecError(list(unique))
@@ -116,8 +116,10 @@ def _document_problems(document: Mapping[str, Any]) -> Iterator[Problem]:
                     key,
                 )
             elif not any(accepts(one, v) for one in all_keys(key) for v in _listed(defaults[key])):
+                found, words = defaults[key], known[key].words
+                hint = nearest(found, words) if isinstance(found, str) else ""
                 yield Problem(
-                    f"found {shown(defaults[key])}, allowed is {known[key].allowed}",
+                    f"found {shown(found)}, allowed is {known[key].allowed}{hint}",
                     "[defaults]",
                     key,
                 )
@@ -135,6 +137,7 @@ def expand(
     given.setdefault("language", [name for name, one in LANGUAGES.items() if one.default])
     lists = {key: value if isinstance(value, list) else [value] for key, value in given.items()}
     problems = list(_list_problems(name, lists))
+    lists = {key: value for key, value in lists.items() if value}
     total = math.prod(len(value) for value in lists.values())
     if total > LARGEST_PRODUCT:
         problems.append(Problem(f"{total} combinations are more than {LARGEST_PRODUCT}", name))
@@ -148,7 +151,9 @@ def expand(
         try:
             spec = make_spec(variant, **values)
         except SpecError as error:
-            problems += [replace(p, kernel=p.kernel and name) for p in error.problems]
+            # A wrong value may make the variant's name wrong: then the name is not to blame.
+            own = [p for p in error.problems if variant == name or p.key != "name"]
+            problems += [replace(p, kernel=p.kernel and name) for p in own or error.problems]
         else:
             made.setdefault((spec.language, spec.name), spec)
     if problems:

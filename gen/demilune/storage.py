@@ -51,7 +51,7 @@ def sizes_for(
         raise InputError(f"n = {n}; at least 0 is needed")
     if layout.n not in ("runtime", n):
         raise InputError(f"the specification has n = {layout.n}, the matrix has {n} rows")
-    allowed = [one.name for one in (*layout.sizes(), *layout.after())]
+    allowed = {one.name: one for one in (*layout.sizes(), *layout.after())}
     sizes: dict[str, Any] = {"n": n}
     for name, value in given.items():
         if name not in allowed:
@@ -60,11 +60,12 @@ def sizes_for(
                 f"(allowed: {', '.join(allowed) or 'none'})"
             )
         if value is not None:
-            sizes[name] = value if isinstance(value, np.ndarray) else whole_number(name, value)
+            places = allowed[name].kind == "places"
+            sizes[name] = value if places else whole_number(name, value)
     if matrix is not None:
         sizes = {**layout.sizes_of_matrix(matrix), **sizes}
-    for name in (one.name for one in (*layout.sizes(), *layout.after()) if one.name != "ld"):
-        if name not in sizes:
+    for name in allowed:
+        if name not in sizes and name != "ld":
             raise InputError(f"{name} must be passed: the specification leaves it open")
     problems = list(layout.argument_problems(sizes))
     sizes = layout.environment(layout.complete(sizes))

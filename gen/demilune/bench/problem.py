@@ -261,6 +261,7 @@ def uniform(generator: np.random.Generator, shape: tuple[int, ...], name: str) -
 
 
 KINDS = 7
+"""Kinds of values; further lanes are of the last kind, in which sums cancel."""
 
 
 def all_magnitudes(real: str) -> Draw:
@@ -282,7 +283,7 @@ def all_magnitudes(real: str) -> Draw:
         signs = generator.choice([-1.0, 1.0], size=shape)
         picked = generator.random(size=shape)
         for lane in range(shape[-1]):
-            kind, at = lane % KINDS, (..., lane)
+            kind, at = min(lane, KINDS - 1), (..., lane)
             if kind == 1:  # half the range of exponents: products do not overflow
                 values[at] = np.ldexp(values[at], exponents[at] // 2)
             elif kind == 2:  # every exponent
@@ -296,28 +297,35 @@ def all_magnitudes(real: str) -> Draw:
                 tiny = np.ldexp(values[at], info.minexp // 2 - 8)
                 values[at] = np.where(picked[at] < 0.3, 0.0 * signs[at], tiny)
             elif kind == 6:
-                values[at] = _cancelling(values[at], name, generator, float(info.eps))
+                values[at] = _cancelling(
+                    values[at], name, generator, float(info.eps), lane % 2 == 1
+                )
         return values
 
     return draw
 
 
-def _cancelling(values: Lanes, name: str, generator: np.random.Generator, eps: float) -> Lanes:
+def _cancelling(
+    values: Lanes, name: str, generator: np.random.Generator, eps: float, near: bool
+) -> Lanes:
     """Rows whose sums cancel to a few units of the last place, so that every order shows.
 
-    The second half of the columns repeats the first, and the second half of x is nearly
-    opposite to the first.
+    Each column is repeated once, and the elements of x that meet the two are nearly opposite:
+    half the matrix apart, or ``near`` each other so that a narrow band has them too.
     """
     size = values.shape[0]
     half = max(1, size // 2)
-    first = np.arange(size) % half
+    place = np.arange(size)
+    first = place // 2 * 2 if near else place % half
     if name == "A":
         return np.asarray(values[np.ix_(first, first)])
     if name == "y":
         return values * eps
     x = values[first]
-    x[half:] *= -(1 + eps * generator.integers(1, 9, size=x[half:].shape))
-    x[2 * half :] *= eps
+    second = place % 2 == 1 if near else place >= half
+    x[second] *= -(1 + eps * generator.integers(1, 9, size=x[second].shape))
+    if size % 2:
+        x[-1] *= eps  # the one that has no partner
     return np.asarray(x)
 
 

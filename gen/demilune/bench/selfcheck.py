@@ -10,6 +10,7 @@ from demilune.bench.levels import verify
 from demilune.plan.build import Plan
 from demilune.render import render
 from demilune.toolchain.build import Unit, build_units
+from demilune.toolchain.executables import Executable
 
 
 @dataclass(frozen=True)
@@ -50,13 +51,9 @@ def selfcheck(
             routine = replace(changed.routine, name=name)
             planted.append((fault, replace(changed, spec=replace(plan.spec, name=name),
                                            routine=routine)))  # fmt: skip
-    language, plans = plan.spec.language, [changed for _, changed in planted]
-    files = render(plans, "faults", language, contracts=False)
-    (unit,) = build_units([Unit("faults", language, plans, files)])
-    if unit.error is not None:
-        raise unit.error
+    executables = _built([changed for _, changed in planted])
     trials = []
-    for done, ((fault, _), executable) in enumerate(zip(planted, unit.executables, strict=True)):
+    for done, ((fault, _), executable) in enumerate(zip(planted, executables, strict=True)):
         progress(f"planting {fault.name}", done, len(planted))
         verdict = verify(plan, executable, seed, until=fault.levels)
         failed = [level for level in verdict.levels if level.failed]
@@ -64,3 +61,12 @@ def selfcheck(
         message = wanted[0].failures[0] if wanted else ""
         trials.append(Trial(fault, tuple(level.name for level in failed), message))
     return trials
+
+
+def _built(plans: list[Plan]) -> list[Executable]:
+    language = plans[0].spec.language
+    files = render(plans, "faults", language, contracts=False)
+    (unit,) = build_units([Unit("faults", language, plans, files)])
+    if unit.error is not None:
+        raise unit.error
+    return unit.executables

@@ -11,11 +11,16 @@ from pathlib import Path
 from typing import Any
 
 import click
+from click.core import ParameterSource
 
 from demilune import files, pipeline, storage
 from demilune.cli import show
 from demilune.cli.starter import STARTER
 from demilune.errors import DemiluneError, InputError
+from demilune.evidence import shape
+from demilune.evidence.reading import read_record
+from demilune.evidence.record import EVIDENCE, PAGE, evidence_of
+from demilune.evidence.replay import replay
 from demilune.keys import nearest
 from demilune.plan.build import Plan, make_plan
 from demilune.plan.counts import flat as flat_counts
@@ -231,23 +236,81 @@ def _diff(folder: Path, name: str, text: str) -> list[str]:
 
 
 @main.command()
-@SPEC
+@click.argument("spec", type=click.Path(path_type=Path, readable=False), required=False)
+@click.option(
+    "-o",
+    "--output",
+    "folder",
+    type=click.Path(path_type=Path),
+    metavar="DIR",
+    help="Write the evidence to this folder; without it nothing is written.",
+)
 @ONLY
 @SEED
+@click.option(
+    "--selfcheck",
+    is_flag=True,
+    help="Plant faults into every kernel, and fail if the bench does not catch one.",
+)
+@click.option(
+    "--replay",
+    "recorded",
+    type=click.Path(path_type=Path),
+    metavar="EVIDENCE.json",
+    help="Repeat a recorded run, and tell whether every bit agrees.",
+)
+@FORCE
 @JSON
 @QUIET
+@click.pass_context
 @guarded
-def verify(spec: Path, only: tuple[str, ...], seed: int, as_json: bool, quiet: bool) -> int:
-    """Compile and verify every kernel; write no files.
+def verify(
+    context: click.Context, spec: Path | None, folder: Path | None, only: tuple[str, ...],
+    seed: int, selfcheck: bool, recorded: Path | None, force: bool, as_json: bool, quiet: bool,
+) -> int:  # fmt: skip
+    """Compile and verify every kernel, or repeat a run that was recorded.
 
     Example: demilune verify examples/river_gauges.toml --seed 7
     """
+    if folder is not None and (spec is not None or recorded is not None):
+        pipeline.refuse_early(folder, {}, force)
+    if recorded is not None:
+        given = context.get_parameter_source("seed") is not ParameterSource.DEFAULT
+        if spec is not None or only or selfcheck or given:
+            raise InputError(
+                "--replay takes the specification, kernels, seed and planted faults from the "
+                "record; SPEC, -k, --seed and --selfcheck do not go with it"
+            )
+        return _replay(recorded, folder, force, as_json, quiet)
+    if spec is None:
+        raise click.UsageError("Missing argument 'SPEC'; or repeat a run with --replay.", context)
+    specs = _specs(read(spec), only)
     with show.progress(quiet) as progress:
-        result = pipeline.check(_specs(read(spec), only), seed, progress)
+        result = pipeline.check(specs, seed, progress, selfcheck=selfcheck)
+    if folder is not None:
+        files.write_all(folder, pipeline.report_files(result), force)
     if as_json:
-        show.as_json(pipeline.evidence(result))
+        show.as_json(evidence_of(result))
     else:
         show.outcome(result)
+        if folder is not None:
+            print(f"{EVIDENCE} and {PAGE} are in {folder}")
+    return result.status
+
+
+def _replay(path: Path, folder: Path | None, force: bool, as_json: bool, quiet: bool) -> int:
+    recorded = read_record(path)
+    with show.progress(quiet) as progress:
+        try:
+            result = replay(recorded, progress)
+        except InputError as error:
+            raise InputError(f"{path}: {error}") from error
+    if folder is not None:
+        files.write_all(folder, pipeline.report_files(result.outcome), force)
+    if as_json:
+        show.as_json(result.as_record())
+    else:
+        show.replayed(result)
     return result.status
 
 
@@ -272,10 +335,10 @@ def build(
     with show.progress(quiet) as progress:
         result = pipeline.build(specs, folder, seed=seed, force=force, progress=progress)
     if as_json:
-        show.as_json(pipeline.evidence(result))
+        show.as_json(evidence_of(result))
     else:
         show.outcome(result)
-        print(f"sources and {pipeline.EVIDENCE} are in {folder}")
+        print(f"sources, {EVIDENCE} and {PAGE} are in {folder}")
     return result.status
 
 
@@ -297,11 +360,12 @@ def targets(as_json: bool) -> None:
 
 
 @main.command("schema")
+@click.option("--evidence", is_flag=True, help="That of evidence.json instead.")
 @JSON
 @guarded
-def schema_command(as_json: bool) -> None:
-    """Print the JSON Schema of specification files.
+def schema_command(evidence: bool, as_json: bool) -> None:
+    """Print the JSON Schema of specification files, or of evidence.
 
     Example: demilune schema > specification.schema.json
     """
-    show.as_json(schema())
+    show.as_json(shape.schema() if evidence else schema())

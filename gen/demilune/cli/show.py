@@ -14,7 +14,8 @@ from rich.table import Table
 from rich.text import Text
 
 from demilune.errors import DemiluneError, SpecError
-from demilune.pipeline import Outcome
+from demilune.evidence.outcome import Outcome
+from demilune.evidence.replay import AGREES, DIFFERS, LEFT_OUT, NOTHING, Replay
 from demilune.pipeline import Progress as Report
 
 PIPE_WIDTH = 120
@@ -101,3 +102,50 @@ def outcome(result: Outcome) -> None:
         shown.print(Text(f"  why, and how to get it: {reason}"), soft_wrap=True)
     counts = [f"{n} {s}" for s in COLOURS if (n := sum(r.status == s for r in result.rows))]
     shown.print(Text(f"{len(result.rows)} kernels: {', '.join(counts)}"), soft_wrap=True)
+    if result.selfcheck:
+        _planted(result, shown)
+
+
+def _planted(result: Outcome, shown: Console) -> None:
+    """How many planted faults were caught, and the bench's debt."""
+    trials = [trial for row in result.rows for trial in row.trials or []]
+    caught = sum(trial.caught for trial in trials)
+    shown.print(Text(f"planted faults: {len(trials)} planted, {caught} caught"), soft_wrap=True)
+    for row in result.rows:
+        for trial in row.survivors:
+            name = f"{row.spec.name} ({row.spec.language})"
+            line = f"the bench's debt: {trial.fault.name} in {name}: {trial.fault.meaning}"
+            shown.print(Text(line, style="bold red"), soft_wrap=True)
+        if row.untried:
+            line = f"no faults planted in {row.spec.name} ({row.spec.language}): {row.untried}"
+            shown.print(Text(line), soft_wrap=True)
+
+
+FOUND = {AGREES: "green", DIFFERS: "bold red", NOTHING: "yellow", LEFT_OUT: "yellow"}
+
+
+def replayed(result: Replay) -> None:
+    """What a replay found, kernel by kernel, and what may be why."""
+    table = Table(box=None, pad_edge=False, header_style="bold")
+    for name in ("kernel", "language", "replay", "recorded", "here"):
+        table.add_column(name)
+    for one in result.kernels:
+        found = Text(one.found, style=FOUND[one.found])
+        table.add_row(one.name, one.language, found, one.recorded_status, one.status)
+    shown = console()
+    shown.print(table)
+    for one in result.kernels:
+        for line in [*one.differences, *([one.reason] if one.reason else [])]:
+            shown.print(_printable(f"{one.name} ({one.language}): {line}"), soft_wrap=True)
+    for line in result.files:
+        shown.print(_printable(line), soft_wrap=True)
+    if not result.agrees and result.surroundings:
+        shown.print(Text("what else is not as it was recorded:"))
+        for line in result.surroundings:
+            shown.print(_printable(f"  {line}"), soft_wrap=True)
+    shown.print(Text(result.verdict), soft_wrap=True)
+
+
+def _printable(text: str) -> Text:
+    """A line that may hold words from a file: nothing of it steers the terminal."""
+    return Text("".join(letter if letter.isprintable() else "?" for letter in text))

@@ -273,6 +273,13 @@ def walk(body: tuple[Statement, ...]) -> Iterator[Statement]:
             yield from walk(block)
 
 
+def uses_fma(routine: Routine) -> bool:
+    """Whether the routine, or a function of it, has a fused multiply-add."""
+    bodies = (routine.body, *(one.body for one in routine.functions))
+    found = (value for body in bodies for one in walk(body) for value in values(one))
+    return any(isinstance(leaf, Fma) for value in found for leaf in leaves(value))
+
+
 def operands(value: Value) -> tuple[Value, ...]:
     """The values that ``value`` is made of."""
     if isinstance(value, Binary):

@@ -11,6 +11,7 @@ from pathlib import Path
 from demilune.errors import CheckError, DemiluneError, MissingError
 from demilune.languages import LANGUAGES
 from demilune.plan.build import Plan
+from demilune.plan.tree import uses_fma
 from demilune.toolchain import cache
 from demilune.toolchain.compilers import Compiler, find_compiler, has_fma, library_flags
 from demilune.toolchain.executables import CExecutable, Executable, PythonExecutable
@@ -27,7 +28,7 @@ def executable_of(plan: Plan, files: Mapping[str, str]) -> Executable:
 
 def flags_for(plans: list[Plan]) -> tuple[str, ...]:
     """The compiler flags for a file that holds these routines; all have one environment."""
-    fma = any(plan.spec.arithmetic.fma for plan in plans)
+    fma = any(uses_fma(plan.routine) for plan in plans)
     environment = plans[0].spec.target.environment
     if fma and environment == "freestanding" and not has_fma():
         raise MissingError(

@@ -32,7 +32,7 @@ from demilune.plan.tree import (
 )
 
 
-@fault("sums are taken in the other direction", ("faithful",))
+@fault("sums are taken in the other direction", ("faithful",), order=True)
 def order_reversed(plan: Plan) -> Plan:
     schedule = plan.spec.schedule
     other = "forward" if schedule.backward else "backward"
@@ -42,7 +42,7 @@ def order_reversed(plan: Plan) -> Plan:
     return from_spec(plan, spec)
 
 
-@fault("another loop order is used", ("faithful",))
+@fault("another loop order is used", ("faithful",), order=True)
 def another_loop_order(plan: Plan) -> Plan:
     spec, operation = plan.spec, plan.spec.operation
     others = [loop for loop in operation.loops() if loop != spec.schedule.loop]
@@ -51,7 +51,7 @@ def another_loop_order(plan: Plan) -> Plan:
     return from_spec(plan, replace(spec, schedule=replace(spec.schedule, loop=others[0])))
 
 
-@fault("products are contracted into fused multiply-adds", ("faithful",))
+@fault("products are contracted into fused multiply-adds", ("faithful",), order=True)
 def contracted(plan: Plan) -> Plan:
     arithmetic = plan.spec.arithmetic
     if arithmetic.type.integer or arithmetic.compensated or arithmetic.fma:
@@ -65,7 +65,7 @@ def contracted(plan: Plan) -> Plan:
     return from_spec(plan, spec)
 
 
-@fault("fused multiply-adds are rounded twice", ("faithful",))
+@fault("fused multiply-adds are rounded twice", ("faithful",), order=True)
 def rounded_twice(plan: Plan) -> Plan:
     def value(one: Value) -> Value:
         if isinstance(one, Fma):
@@ -78,7 +78,7 @@ def rounded_twice(plan: Plan) -> Plan:
     return rewritten(plan, value=value)
 
 
-@fault("float is promoted to double", ("faithful",))
+@fault("float is promoted to double", ("faithful",), order=True)
 def promoted_to_double(plan: Plan) -> Plan:
     arithmetic = plan.spec.arithmetic
     if arithmetic.real != "float32" or arithmetic.accumulator != "plain":
@@ -89,7 +89,7 @@ def promoted_to_double(plan: Plan) -> Plan:
     return with_body(plan, changed.routine.body) if same else plan
 
 
-@fault("errors of the compensated sum are dropped", ("bound", "faithful"))
+@fault("errors of the compensated sum are dropped", ("bound", "faithful"), order=True)
 def compensation_dropped(plan: Plan) -> Plan:
     def statement(one: Statement) -> Statements:
         dropped = isinstance(one, Assign) and "_err" in one.name
