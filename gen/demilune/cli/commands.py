@@ -38,7 +38,7 @@ QUIET = click.option("-q", "--quiet", is_flag=True, help="Show no progress.")
 FORCE = click.option("--force", is_flag=True, help="Write over files of somebody else, too.")
 ONLY = click.option(
     "-k", "--kernel", "only", multiple=True, metavar="NAME",
-    help="Only kernels whose name begins with NAME, and those that share a file with one.",
+    help="Only kernels whose name begins with NAME (and, where files are written, those in them).",
 )  # fmt: skip
 OUTPUT = click.option(
     "-o", "--output", "folder", type=click.Path(path_type=Path), default=Path("build_out"),
@@ -92,7 +92,8 @@ def main() -> None:
     """
 
 
-def _specs(source: SpecFile, only: tuple[str, ...]) -> list[Spec]:
+def _specs(source: SpecFile, only: tuple[str, ...], whole: bool = False) -> list[Spec]:
+    """The kernels that are asked for; ``whole`` adds those that share a file with one."""
     if not only:
         return list(source.specs)
     chosen = [s for s in source.specs if any(s.name.startswith(name) for name in only)]
@@ -103,7 +104,8 @@ def _specs(source: SpecFile, only: tuple[str, ...]) -> list[Spec]:
             raise InputError(
                 f'{source.path}: no kernel begins with "{name}"{nearest(name, names)} ({few})'
             )
-    # A file is written whole: the kernels that share one with a chosen kernel come along.
+    if not whole:
+        return chosen
     shared = {(spec.file, spec.language) for spec in chosen}
     return [spec for spec in source.specs if (spec.file, spec.language) in shared]
 
@@ -208,7 +210,9 @@ def emit(
     Example: demilune emit examples/footbridge.toml -o generated --check
     """
     with show.progress(quiet) as progress:
-        texts = pipeline.all_files(pipeline.units_of(_specs(read(spec), only), progress))
+        texts = pipeline.all_files(
+            pipeline.units_of(_specs(read(spec), only, whole=True), progress)
+        )
     if check or diff:
         stale = [n for n, text in texts.items() if files.current(folder / n) != text]
         if diff and not as_json:
@@ -331,7 +335,7 @@ def build(
 
     Example: demilune build examples/buoy_estimator.toml
     """
-    specs = _specs(read(spec), only)
+    specs = _specs(read(spec), only, whole=True)
     with show.progress(quiet) as progress:
         result = pipeline.build(specs, folder, seed=seed, force=force, progress=progress)
     if as_json:
