@@ -29,6 +29,7 @@ from demilune.bench.problem import (
     structured,
     structures,
     uniform,
+    with_other_junk,
 )
 from demilune.bench.reference import errors, numpy_product
 from demilune.bench.run import arguments_of, differences, foretell, run_case
@@ -312,6 +313,8 @@ class _Bench:
             level.facts["guard pages"] = guard.WHY_NOT
         for problem in problems:
             self._compare(level, problem, foretell(self.evaluator, problem), by_value=False)
+            other = with_other_junk(problem)
+            self._compare(level, other, foretell(self.evaluator, other), by_value=False)
 
     def _plain(self, setting: Setting) -> Draw:
         if not self.spec.arithmetic.type.integer:

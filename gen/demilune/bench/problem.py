@@ -9,7 +9,7 @@ for integers a large number of a like pattern.
 from __future__ import annotations
 
 from collections.abc import Callable, Iterator
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from typing import Any
 
 import numpy as np
@@ -122,6 +122,18 @@ def make_problem(
     for one in plan.arrays.values():
         _lay_out(problem, one)
     return problem
+
+
+def with_other_junk(problem: Problem) -> Problem:
+    """The same problem with an ordinary number of a pattern of our own where poison was.
+
+    What is read and then multiplied or compared away can depend on what is there.
+    """
+    buffers = {name: buffer.copy() for name, buffer in problem.buffers.items()}
+    for name, one in problem.plan.arrays.items():
+        bits = buffers[name].view(BITS[one.type])
+        bits[bits == POISON[one.type]] = int.from_bytes(b"\x2d" * BITS[one.type].itemsize)
+    return replace(problem, buffers=buffers)
 
 
 def _lay_out(problem: Problem, one: Parameter) -> None:
