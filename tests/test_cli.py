@@ -415,7 +415,7 @@ def test_only_some_kernels(pair, tmp_path):
     assert not (tmp_path / "none").exists()
 
 
-def test_kernels_that_share_a_file_with_a_chosen_one_come_along(tmp_path):
+def test_kernels_that_share_a_file_with_a_chosen_one_are_written_with_it(tmp_path):
     """A file is written whole, or a second run would take routines out of it."""
     path = tmp_path / "barrier.toml"
     path.write_text(
@@ -428,6 +428,8 @@ def test_kernels_that_share_a_file_with_a_chosen_one_come_along(tmp_path):
     assert re.findall(r"^def (\w+)", (out / "barrier.py").read_text(), re.MULTILINE) == [
         "gate", "lock",
     ]  # fmt: skip
+    shown = json.loads(invoke("plan", path, "-k", "gate", "--json").stdout)
+    assert [one["kernel"] for one in shown] == ["gate"]  # nothing is written here
 
 
 def test_the_same_seed_gives_the_same_evidence_and_another_another(gauge, tmp_path):

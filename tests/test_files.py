@@ -182,8 +182,9 @@ def test_a_folder_in_the_way_is_left_alone(gauge, out):
 
 def test_a_folder_in_the_way_is_left_alone_even_with_force(gauge, out):
     (out / "gauge.h" / "inside").mkdir(parents=True)
-    refused("emit", gauge, "-o", out, "--force", place=out,
-            parts=[str(out / "gauge.h"), "is a folder"])
+    refused(
+        "emit", gauge, "-o", out, "--force", place=out, parts=[str(out / "gauge.h"), "is a folder"]
+    )
 
 
 def test_a_link_is_replaced_and_not_what_it_points_to(gauge, out, tmp_path):
