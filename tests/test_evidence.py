@@ -216,8 +216,9 @@ def test_equal_runs_give_equal_bytes_and_another_seed_another_record(asked, tmp_
     assert {p.name: p.read_bytes() for p in (tmp_path / "a").iterdir()} == texts[0]
     planted = json.loads(texts[1]["evidence.json"])
     assert planted["planted_faults"]["planted"] > 20
-    assert run("verify", path, "--seed", 7, "--selfcheck", "--json").stdout.encode() == (
-        texts[1]["evidence.json"]
+    assert (
+        run("verify", path, "--seed", 7, "--selfcheck", "--json").stdout.encode()
+        == (texts[1]["evidence.json"])
     )
     first, other = (json.loads(texts[k]["evidence.json"])["kernels"][0]["levels"] for k in (0, 2))
     assert all(a["results"] != b["results"] for a, b in zip(first, other, strict=True))

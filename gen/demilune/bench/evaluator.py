@@ -47,11 +47,11 @@ Lanes = npt.NDArray[Any]
 def fused(left: Any, right: Any, addend: Any) -> Any:
     """left * right + addend with one rounding, lane by lane."""
     left, right, addend = np.broadcast_arrays(left, right, addend)
-    if left.dtype == np.float32:
-        return _fused32(left, right, addend)
-    return np.array(
-        [_fused64(*three) for three in zip(left.flat, right.flat, addend.flat, strict=True)]
-    ).reshape(left.shape)
+    with np.errstate(all="ignore"):
+        if left.dtype == np.float32:
+            return _fused32(left, right, addend)
+        triples = zip(left.flat, right.flat, addend.flat, strict=True)
+        return np.array([_fused64(*three) for three in triples]).reshape(left.shape)
 
 
 def _fused32(left: Lanes, right: Lanes, addend: Lanes) -> Lanes:

@@ -9,6 +9,7 @@ import select
 import signal
 import sys
 import time
+import warnings
 from collections.abc import Iterable, Iterator
 from typing import Any, BinaryIO, TypeVar
 
@@ -29,7 +30,9 @@ def results(work: Iterable[T], seconds: float) -> Iterator[T]:
     sys.stdout.flush()
     sys.stderr.flush()
     reading, writing = os.pipe()
-    child = os.fork()
+    with warnings.catch_warnings():  # the child runs none of the threads that there may be
+        warnings.simplefilter("ignore", DeprecationWarning)
+        child = os.fork()
     if child == 0:  # pragma: no cover - measured in the parent only
         _child(work, reading, writing)
     os.close(writing)
