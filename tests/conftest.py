@@ -9,9 +9,10 @@ import pytest
 from hypothesis import HealthCheck, settings
 
 settings.register_profile(
-    "normal", max_examples=25, deadline=None, suppress_health_check=list(HealthCheck)
-)
-settings.register_profile("long", parent=settings.get_profile("normal"), max_examples=2000)
+    "normal", max_examples=25, deadline=None, suppress_health_check=list(HealthCheck),
+    derandomize=os.environ.get("CI") == "true",  # there a failure must be the change's own
+)  # fmt: skip
+settings.register_profile("long", parent=settings.get_profile("normal"), max_examples=250)
 settings.load_profile(os.environ.get("HYPOTHESIS_PROFILE", "normal"))
 
 
