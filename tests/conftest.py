@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import os
 import tempfile
+from pathlib import Path
 
 import pytest
 from hypothesis import HealthCheck, settings
@@ -14,6 +15,12 @@ settings.register_profile(
 )  # fmt: skip
 settings.register_profile("long", parent=settings.get_profile("normal"), max_examples=250)
 settings.load_profile(os.environ.get("HYPOTHESIS_PROFILE", "normal"))
+
+
+@pytest.fixture(autouse=True)
+def _somewhere_else(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
+    """Commands that write to build_out unless told otherwise write below the test's own folder."""
+    monkeypatch.chdir(tmp_path)
 
 
 def pytest_addoption(parser: pytest.Parser) -> None:

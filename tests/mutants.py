@@ -19,7 +19,10 @@ from pathlib import Path
 
 ROOT = Path(__file__).parents[1]
 FILES = ("layouts/*.py", "plan/build.py", "plan/writer.py", "plan/prune.py", "index.py")
-TESTS = ("test_layouts.py", "test_golden.py", "test_kernel.py", "test_combinations.py")
+TESTS = (
+    "test_layouts.py", "test_golden.py", "test_kernel.py", "test_library.py",
+    "test_combinations.py",
+)  # fmt: skip
 SECONDS = 240
 
 SWAPS = {

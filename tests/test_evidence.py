@@ -263,15 +263,12 @@ def test_texts_lose_their_folders(text, expected):
 # --- writing -------------------------------------------------------------------------------------
 
 
-def test_verify_writes_nothing_unless_it_is_told_where(asked, tmp_path):
-    path = asked(PYTHON)
-    before = snapshot(tmp_path)
-    assert invoke("verify", path).exit_code == 0
-    assert snapshot(tmp_path) == before
-    assert "evidence.json and evidence.html are in" in invoke(
-        "verify", path, "-o", tmp_path / "out"
-    ).stdout  # fmt: skip
-    assert {one.name for one in (tmp_path / "out").iterdir()} == {"evidence.json", "evidence.html"}
+@pytest.mark.parametrize("words", [[], ["-o", "out"]])
+def test_verify_writes_the_evidence_and_no_sources(asked, tmp_path, words):
+    folder = tmp_path / (words[1] if words else "build_out")
+    told = invoke("verify", asked(PYTHON), *words).stdout
+    assert f"evidence.json and evidence.html are in {folder.name}" in told
+    assert {one.name for one in folder.iterdir()} == {"evidence.json", "evidence.html"}
 
 
 @pytest.mark.parametrize("name", ["evidence.json", "evidence.html"])

@@ -247,7 +247,7 @@ def _diff(folder: Path, name: str, text: str) -> list[str]:
     "folder",
     type=click.Path(path_type=Path),
     metavar="DIR",
-    help="Write the evidence to this folder; without it nothing is written.",
+    help="The folder for the evidence: build_out, or with --replay none, if it is not given.",
 )
 @ONLY
 @SEED
@@ -272,11 +272,11 @@ def verify(
     context: click.Context, spec: Path | None, folder: Path | None, only: tuple[str, ...],
     seed: int, selfcheck: bool, recorded: Path | None, force: bool, as_json: bool, quiet: bool,
 ) -> int:  # fmt: skip
-    """Compile and verify every kernel, or repeat a run that was recorded.
+    """Compile and verify every kernel and write the evidence, or repeat a recorded run.
 
     Example: demilune verify examples/river_gauges.toml --seed 7
     """
-    if folder is not None and (spec is not None or recorded is not None):
+    if folder is not None and recorded is not None:
         pipeline.refuse_early(folder, {}, force)
     if recorded is not None:
         given = context.get_parameter_source("seed") is not ParameterSource.DEFAULT
@@ -289,16 +289,16 @@ def verify(
     if spec is None:
         raise click.UsageError("Missing argument 'SPEC'; or repeat a run with --replay.", context)
     specs = _specs(read(spec), only)
+    folder = folder or Path("build_out")
+    pipeline.refuse_early(folder, {}, force)
     with show.progress(quiet) as progress:
         result = pipeline.check(specs, seed, progress, selfcheck=selfcheck)
-    if folder is not None:
-        files.write_all(folder, pipeline.report_files(result), force)
+    files.write_all(folder, pipeline.report_files(result), force)
     if as_json:
         show.as_json(evidence_of(result))
     else:
         show.outcome(result)
-        if folder is not None:
-            print(f"{EVIDENCE} and {PAGE} are in {folder}")
+        print(f"{EVIDENCE} and {PAGE} are in {folder}")
     return result.status
 
 
