@@ -180,7 +180,7 @@ def draw_setting(
 ) -> Setting:
     """Sizes, strides and scalars for ``n``; what is not fixed is drawn."""
     operation, arithmetic = plan.spec.operation, plan.spec.arithmetic
-    sizes = plan.spec.layout.environment(plan.spec.layout.sample(n, generator))
+    sizes = dict(plan.spec.layout.sample(n, generator))
     for name in ("incx", "incy"):
         if hasattr(operation, name):
             fixed = getattr(operation, name)
