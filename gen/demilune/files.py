@@ -71,6 +71,14 @@ def write_all(folder: Path, files: Mapping[str, str], force: bool = False) -> li
     return changed
 
 
+def contents(path: Path) -> bytes:
+    """The bytes of a file; raises :class:`InputError` if it cannot be read."""
+    try:
+        return path.read_bytes()
+    except OSError as error:
+        raise InputError(f"{path}: cannot be read: {error.strerror}") from error
+
+
 def current(path: Path) -> str | None:
     """The text of a file, or None if there is none."""
     try:

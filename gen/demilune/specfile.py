@@ -21,6 +21,7 @@ from pathlib import Path
 from typing import Any
 
 from demilune.errors import InputError, Problem, SpecError
+from demilune.files import contents
 from demilune.keys import defaults_of, nearest
 from demilune.languages import LANGUAGES
 from demilune.layouts import LAYOUTS
@@ -53,10 +54,7 @@ class SpecFile:
 def read(path: str | Path) -> SpecFile:
     """Reads and checks a file; raises :class:`SpecError` with everything that is wrong."""
     path = Path(path)
-    try:
-        data = path.read_bytes()
-    except OSError as error:
-        raise InputError(f"{path}: cannot be read: {error.strerror}") from error
+    data = contents(path)
     try:
         text = data.decode("utf-8")
     except UnicodeDecodeError as error:

@@ -12,16 +12,14 @@ from demilune import files
 from demilune.errors import InputError
 from demilune.evidence import shape
 from demilune.evidence.record import FORMAT, digest
+from demilune.files import contents
 from demilune.version import __version__
 
 
 def read_record(path: str | Path) -> dict[str, Any]:
     """The record in a file; raises :class:`InputError` with one message if it is no whole one."""
     path = Path(path)
-    try:
-        data = path.read_bytes()
-    except OSError as error:
-        raise InputError(f"{path}: cannot be read: {error.strerror}") from error
+    data = contents(path)
     try:
         return checked(_parsed(data))
     except InputError as error:

@@ -2,23 +2,23 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterator, Mapping
+from collections.abc import Iterator
 from dataclasses import dataclass
 from typing import Any, ClassVar
 
 import numpy as np
 import numpy.typing as npt
 
-from demilune.index import Compare, Environment, Expr, expr, maximum, minimum, symbol
+from demilune.index import Compare, Expr, expr, maximum, minimum, symbol
 from demilune.keys import RUNTIME, key
-from demilune.layouts.base import Diagonal, Group, Layout, Piece, Size, from_to
+from demilune.layouts.base import Diagonal, Group, Piece, Rectangular, Size, from_to
 from demilune.plan.tree import Parameter
 
 KD, LD = symbol("kd"), symbol("ld")
 
 
 @dataclass(frozen=True)
-class Band(Layout):
+class Band(Rectangular):
     """kd off-diagonals and the diagonal; the corners of the array are never touched."""
 
     name: ClassVar[str] = "band"
@@ -90,11 +90,6 @@ class Band(Layout):
             return ()
         return (Parameter("kd", "size", "half-bandwidth: off-diagonals that are stored"),)
 
-    def after(self) -> tuple[Parameter, ...]:
-        if self.leading.constant is not None:
-            return ()
-        return (Parameter("ld", "size", "leading dimension of a, in elements"),)
-
     def rules(self) -> Iterator[tuple[Compare, str, str]]:
         if self.width.constant is None:
             yield Compare(self.width, "<", expr(0)), "kd", "at least 0"
@@ -120,8 +115,6 @@ class Band(Layout):
                     f"the leading dimension {self.ld} is less than kd + 1 = {int(self.kd) + 1}",
                 )
 
-    two_dimensional: ClassVar[bool] = True
-
     @property
     def rows(self) -> Expr:
         return self.width + 1
@@ -136,24 +129,10 @@ class Band(Layout):
         distance = j - i if self.triangle == "upper" else i - j
         return {"kd": int(distance.max(initial=0))}
 
-    def complete(self, sizes: Mapping[str, Any]) -> dict[str, Any]:
-        known = dict(sizes)
-        if self.leading.constant is None:
-            known.setdefault("ld", self.width.value(known) + 1)
-        return known
-
-    def shape(self, env: Environment) -> tuple[int, ...]:
-        n, ld = self.size.value(env), self.leading.value(env)
-        return (ld, n) if self.order == "column-major" else (n, ld)
-
-    def sample(self, n: int, generator: np.random.Generator | None = None) -> dict[str, Any]:
-        sizes: dict[str, Any] = {"n": n}
-        if self.width.constant is None:
-            widest = max(0, n - 1)
-            sizes["kd"] = min(2, widest)
-            if generator is not None:
-                sizes["kd"] = int(generator.integers(0, widest + 2))
-        if self.leading.constant is None:
-            extra = 0 if generator is None else int(generator.integers(0, 4))
-            sizes["ld"] = self.width.value(sizes) + 1 + extra
-        return sizes
+    def sample_width(self, n: int, generator: np.random.Generator | None) -> dict[str, Any]:
+        if self.width.constant is not None:
+            return {}
+        widest = max(0, n - 1)
+        if generator is None:
+            return {"kd": min(2, widest)}
+        return {"kd": int(generator.integers(0, widest + 2))}

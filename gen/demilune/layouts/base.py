@@ -301,6 +301,38 @@ class Layout:
                                 yield fixed, low, high, first
 
 
+@dataclass(frozen=True)
+class Rectangular(Layout):
+    """A layout that lies in a two-dimensional array, a strip in each column, ``ld`` apart."""
+
+    two_dimensional: ClassVar[bool] = True
+
+    def after(self) -> tuple[Parameter, ...]:
+        if self.leading.constant is not None:
+            return ()
+        return (Parameter("ld", "size", "leading dimension of a, in elements"),)
+
+    def complete(self, sizes: Mapping[str, Any]) -> dict[str, Any]:
+        known = dict(sizes)
+        if self.leading.constant is None:
+            known.setdefault("ld", max(1, self.rows.value(known)))
+        return known
+
+    def shape(self, env: Environment) -> tuple[int, ...]:
+        n, ld = self.size.value(env), self.leading.value(env)
+        return (ld, n) if self.order == "column-major" else (n, ld)
+
+    def sample(self, n: int, generator: np.random.Generator | None = None) -> dict[str, Any]:
+        sizes = self.complete(super().sample(n, generator) | self.sample_width(n, generator))
+        if self.leading.constant is None and generator is not None:
+            sizes["ld"] += int(generator.integers(0, 4))
+        return sizes
+
+    def sample_width(self, n: int, generator: np.random.Generator | None) -> dict[str, Any]:
+        """A width of the strips that makes sense, where it is not told by n."""
+        return {}
+
+
 def _every(ranges: tuple[Range, ...], env: Mapping[str, Any]) -> Iterator[dict[str, Any]]:
     """The environments of the nested loops ``ranges``."""
     if not ranges:

@@ -2,22 +2,19 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterator, Mapping
+from collections.abc import Iterator
 from dataclasses import dataclass
-from typing import Any, ClassVar
+from typing import ClassVar
 
-import numpy as np
-
-from demilune.index import Compare, Environment, Expr, expr, maximum, symbol
+from demilune.index import Compare, Expr, expr, maximum, symbol
 from demilune.keys import RUNTIME, key
-from demilune.layouts.base import Group, Layout, Size, plain_group
-from demilune.plan.tree import Parameter
+from demilune.layouts.base import Group, Rectangular, Size, plain_group
 
 LD = symbol("ld")
 
 
 @dataclass(frozen=True)
-class Full(Layout):
+class Full(Rectangular):
     """The half of a two-dimensional array; the other half is never touched."""
 
     name: ClassVar[str] = "full"
@@ -50,11 +47,6 @@ class Full(Layout):
         first, second = ("i", "j") if self.order == "column-major" else ("j", "i")
         return (f"A(i,j) is a[{first} + {second}*{ld}]",)
 
-    def after(self) -> tuple[Parameter, ...]:
-        if self.leading.constant is not None:
-            return ()
-        return (Parameter("ld", "size", "leading dimension of a, in elements"),)
-
     def rules(self) -> Iterator[tuple[Compare, str, str]]:
         if self.leading.constant is None:
             lowest = maximum(1, self.size)
@@ -68,25 +60,6 @@ class Full(Layout):
             elif int(self.ld or 0) < int(self.n):
                 yield "ld", f"the leading dimension {self.ld} is less than n = {self.n}"
 
-    two_dimensional: ClassVar[bool] = True
-
     @property
     def rows(self) -> Expr:
         return self.size
-
-    def complete(self, sizes: Mapping[str, Any]) -> dict[str, Any]:
-        known = dict(sizes)
-        if self.leading.constant is None:
-            known.setdefault("ld", max(1, known["n"]))
-        return known
-
-    def shape(self, env: Environment) -> tuple[int, ...]:
-        n, ld = self.size.value(env), self.leading.value(env)
-        return (ld, n) if self.order == "column-major" else (n, ld)
-
-    def sample(self, n: int, generator: np.random.Generator | None = None) -> dict[str, Any]:
-        sizes: dict[str, Any] = {"n": n}
-        if self.leading.constant is None:
-            extra = 0 if generator is None else int(generator.integers(0, 4))
-            sizes["ld"] = max(1, n) + extra
-        return sizes
