@@ -124,9 +124,8 @@ def _argument(plan: Plan, one: Parameter, language: Language) -> str:
     if one.kind == "scalar":
         kind = "complex" if one.complex else one.type
         unread = plan.spec.operation.unread if one.name == "alpha" else ("y",)
-        return f"{one.meaning}, {kind}; where it is 0, {' and '.join(unread)} are not read".replace(
-            "y are", "y is"
-        )
+        verb = "is" if len(unread) == 1 else "are"
+        return f"{one.meaning}, {kind}; where it is 0, {' and '.join(unread)} {verb} not read"
     assert one.extent is not None
     use = {"in": "read", "out": "written", "inout": "read and written", "scratch": "written"}
     count = extent_text(one.extent)
