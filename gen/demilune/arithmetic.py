@@ -13,9 +13,11 @@ from collections.abc import Iterator
 from dataclasses import dataclass
 from typing import TYPE_CHECKING
 
+from demilune.dtypes import DTYPES, REAL_DIGITS, REAL_SIZE, REALS, NumberType, real_of, same_lanes
 from demilune.keys import key
 from demilune.plan.tree import (
     Binary,
+    Broadcast,
     Constant,
     Convert,
     Declare,
@@ -31,73 +33,7 @@ if TYPE_CHECKING:
     from demilune.plan.writer import Writer
 
 
-@dataclass(frozen=True)
-class RealType:
-    """A real type: its size in bytes and its precision."""
-
-    name: str
-    size: int
-    digits: int
-    """Bits of the significand (floating point) or of the magnitude (integers)."""
-    wider: str | None
-    """The real type that holds every product of two elements, if C has one everywhere."""
-
-    @property
-    def integer(self) -> bool:
-        return self.name.startswith("int")
-
-
-REALS: dict[str, RealType] = {
-    t.name: t
-    for t in (
-        RealType("float32", 4, 24, "float64"),
-        RealType("float64", 8, 53, None),
-        RealType("int16", 2, 15, "int32"),
-        RealType("int32", 4, 31, "int64"),
-        RealType("int64", 8, 63, None),
-    )
-}
-REAL_SIZE = {name: one.size for name, one in REALS.items()}
-REAL_DIGITS = {name: one.digits for name, one in REALS.items()}
-
-
-@dataclass(frozen=True)
-class NumberType:
-    """An element type: its real type, and whether it is complex."""
-
-    name: str
-    real: str
-    complex: bool = False
-
-    @property
-    def size(self) -> int:
-        """Bytes of an element."""
-        return REAL_SIZE[self.real] * self.parts
-
-    @property
-    def wider(self) -> str | None:
-        return REALS[self.real].wider
-
-    @property
-    def parts(self) -> int:
-        return 2 if self.complex else 1
-
-    @property
-    def integer(self) -> bool:
-        return REALS[self.real].integer
-
-
-DTYPES: dict[str, NumberType] = {
-    t.name: t
-    for t in (
-        NumberType("float32", "float32"),
-        NumberType("float64", "float64"),
-        NumberType("complex64", "float32", True),
-        NumberType("complex128", "float64", True),
-        NumberType("int16", "int16"),
-        NumberType("int32", "int32"),
-    )
-}
+LANES = (1, 2, 4, 8, 16, 32)
 
 ACCUMULATORS = {
     "plain": "each sum is rounded to the element type",
@@ -109,7 +45,22 @@ ACCUMULATORS = {
 
 
 def binary(operator: str, left: Value, right: Value) -> Value:
+    left, right = spread(left, right.type), spread(right, left.type)
     return Binary(operator, left, right, left.type)
+
+
+def fused(left: Value, right: Value, addend: Value) -> Value:
+    """``left * right + addend``, rounded once."""
+    type = max(left.type, right.type, addend.type, key=len)
+    left, right, addend = (spread(one, type) for one in (left, right, addend))
+    return Fma(left, right, addend, type)
+
+
+def spread(value: Value, type: str) -> Value:
+    """``value`` in every lane of ``type``, where that has lanes and the value has none."""
+    if value.type == type or real_of(type) == type:
+        return value
+    return Broadcast(value, type)
 
 
 def _add(left: Value, right: Value) -> Value:
@@ -142,11 +93,11 @@ def convert(number: Number, real: str) -> Number:
 
 
 def _converted(value: Value, real: str) -> Value:
-    if value.type == real:
+    if real_of(value.type) == real:
         return value
     if isinstance(value, Constant) and REALS[value.type].wider == real:
         return Constant(value.value, real)  # exact, so that what is known stays known
-    return Convert(value, real)
+    return Convert(value, same_lanes(real, value.type))
 
 
 def real_terms(left: Number, right: Number, part: int) -> Iterator[tuple[str, Value, Value]]:
@@ -182,6 +133,10 @@ class Arithmetic:
 
     dtype: str = key("float64", "type of the elements of A and x", words=tuple(DTYPES))
     accumulator: str = key("plain", "how sums are kept", words=tuple(ACCUMULATORS))
+    lanes: int = key(
+        1, "neighbouring elements of a strip side by side, each with a sum of its own",
+        numbers=LANES,
+    )  # fmt: skip
     fma: bool = key(False, "whether each multiply-add is fused (rounded once)", flag=True)
 
     @property
@@ -245,6 +200,13 @@ class Arithmetic:
                 yield "accumulator", f'"{self.accumulator}" is for integers, not {self.dtype}'
             elif REAL_SIZE[self.accumulator] < REAL_SIZE[self.real]:
                 yield "accumulator", f"{self.accumulator} is narrower than {self.dtype}"
+        if self.lanes > 1 and self.type.integer:
+            yield "lanes", "sums of integers are exact in every order; leave lanes at 1"
+        elif self.lanes > 1 and self.accumulator != "plain":
+            yield (
+                "lanes",
+                f'lanes keep plain sums; use accumulator = "plain", not "{self.accumulator}"',
+            )
         if self.fma and self.type.integer:
             yield "fma", "integer multiply-adds are exact; leave fma at false"
 
@@ -259,7 +221,7 @@ class Arithmetic:
                 if total is None:
                     total = binary("*", _signed(sign, p), q)
                 elif self.fma:
-                    total = Fma(_signed(sign, p), q, total, p.type)
+                    total = fused(_signed(sign, p), q, total)
                 else:
                     total = binary(sign, total, binary("*", p, q))
             assert total is not None
@@ -275,7 +237,7 @@ class Arithmetic:
         for part, start in enumerate(total):
             value: Value = start
             for sign, p, q in real_terms(left, right, part):
-                value = Fma(_signed(sign, p), q, value, p.type)
+                value = fused(_signed(sign, p), q, value)
             result.append(value)
         return tuple(result)
 

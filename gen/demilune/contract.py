@@ -5,9 +5,10 @@ from __future__ import annotations
 import textwrap
 from collections.abc import Iterable
 from fractions import Fraction
+from math import lcm
 from typing import TYPE_CHECKING, Any
 
-from demilune.arithmetic import REAL_DIGITS
+from demilune.dtypes import REAL_DIGITS
 from demilune.expressions import integer_text
 from demilune.index import Choice, Expr
 from demilune.keys import RUNTIME
@@ -188,7 +189,7 @@ def costs(plan: Plan) -> list[str]:
             lines.append(f"The product alone is 2n^2 = {2 * n * n}.")
         return lines
     step, tile = spec.schedule.block, spec.layout.period
-    unit = step * tile if step > 1 and tile % step else max(step, tile)
+    unit = lcm(step, tile, spec.arithmetic.lanes * spec.schedule.steps)
     points = {n: flat(plan, spec.layout.sample(n)) for n in (unit * k for k in (2, 3, 4, 5, 7, 8))}
     names = [name for name in next(iter(points.values())) if name != "bytes of locals"]
     formulas = {

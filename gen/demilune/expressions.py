@@ -7,6 +7,7 @@ from functools import cache
 
 import jinja2
 
+from demilune.dtypes import lanes_of
 from demilune.index import (
     Atom,
     Choice,
@@ -17,17 +18,23 @@ from demilune.index import (
     Monomial,
     Quotient,
     Symbol,
+    expr,
 )
 from demilune.languages import ALL, TEMPLATES, Language
 from demilune.plan.tree import (
+    ONE,
     Binary,
+    Broadcast,
     Condition,
     Constant,
     Convert,
     Fma,
+    Fold,
     Load,
     Local,
     Negate,
+    Pack,
+    Store,
     Value,
 )
 
@@ -58,6 +65,9 @@ class ExpressionWriter:
         self.language, self.freestanding = language, freestanding
         self.syntax = syntax(language.name)
         self.needs: set[str] = set()
+        self.suffix = ""
+        """What is added to the names of an instruction set, where a file holds several."""
+        self.primitives: set[tuple[str, str]] = set()
 
     # --- values ----------------------------------------------------------------------------
 
@@ -66,6 +76,8 @@ class ExpressionWriter:
         s = self.syntax
         if isinstance(value, Local):
             return value.name
+        if isinstance(value, Fold) or lanes_of(value.type) > 1:
+            return self._lanes(value)
         if isinstance(value, Load):
             place = self.place(value.index, value.part)
             return s["load"](value.array, place, value.part, value.type)
@@ -91,6 +103,43 @@ class ExpressionWriter:
             self.needs.add("round_float32")
         operand = _grouped(self.value(value.operand), "+-*")
         return s["convert"](operand, value.operand.type, value.type)
+
+    def _lanes(self, value: Value) -> str:
+        """A value with lanes, or the sum of its lanes, as a call of a primitive."""
+        if isinstance(value, Load):
+            prefix = {None: "", 0: "re_", 1: "im_"}[value.part]
+            return self.primitive(f"{prefix}load", value, self.places(value))
+        if isinstance(value, Negate):
+            return self.primitive("negate", value, [self.value(value.operand)])
+        if isinstance(value, Binary):
+            name = {"+": "add", "-": "sub", "*": "mul"}[value.operator]
+            return self.primitive(name, value, [self.value(value.left), self.value(value.right)])
+        if isinstance(value, Fma):
+            parts = [self.value(part) for part in (value.left, value.right, value.addend)]
+            return self.primitive("fma", value, parts)
+        if isinstance(value, Broadcast):
+            return self.primitive("broadcast", value, [self.value(value.operand)])
+        assert isinstance(value, Pack | Fold)
+        operands = [self.value(one) for one in value.operands]
+        count = len(operands)
+        if isinstance(value, Pack):
+            return self.primitive(f"pack{count}", value, operands)
+        return self.primitive(f"fold{count if count > 1 else ''}", value.operands[0], operands)
+
+    def places(self, one: Load | Store) -> list[str]:
+        """The array, the index, and the stride or the active lanes where they are told."""
+        texts = [one.array, self.integer(one.index)]
+        if one.stride != ONE:
+            lanes = expr(lanes_of(one.type))
+            return [*texts, *map(self.integer, (one.stride, *(one.active or (expr(0), lanes))))]
+        return texts + ([self.integer(end) for end in one.active] if one.active else [])
+
+    def primitive(self, name: str, value: Value | Store, arguments: list[str]) -> str:
+        """The call of a primitive for values with lanes."""
+        if isinstance(value, Load | Store):
+            name += "_strided" if value.stride != ONE else "_part" if value.active else ""
+        self.primitives.add((name, value.type))
+        return self.syntax["primitive"](name, value.type + self.suffix, arguments)
 
     def place(self, index: Expr, part: int | None) -> str:
         """The place of an element, or of one of its parts where these are neighbours."""

@@ -145,6 +145,10 @@ class Expr:
             return self.terms[0][1]
         return None
 
+    def constant_or(self, other: int) -> int:
+        """The value if it depends on nothing, else ``other``."""
+        return other if self.constant is None else self.constant
+
     @cached_property
     def names(self) -> frozenset[str]:
         """The symbols and arrays that the value depends on."""

@@ -22,8 +22,8 @@ class Key:
     """What is allowed for a key.
 
     ``words`` are the strings it may be; ``minimum`` and ``maximum`` bound a whole number if
-    ``whole`` (zero excluded if ``nonzero``); ``number`` allows any finite number;
-    ``flag`` allows true and false; ``text`` allows any string.
+    ``whole`` (zero excluded if ``nonzero``); ``numbers`` are the whole numbers it may be;
+    ``number`` allows any finite number; ``flag`` true and false; ``text`` any string.
     """
 
     help: str
@@ -33,6 +33,7 @@ class Key:
     maximum: int | None = None
     nonzero: bool = False
     number: bool = False
+    numbers: tuple[int, ...] = ()
     flag: bool = False
     text: bool = False
 
@@ -48,6 +49,7 @@ class Key:
                 limits.append(f"to {self.maximum}")
             kind = "a whole number other than 0" if self.nonzero else "a whole number"
             parts.append(" ".join([kind, *limits]))
+        parts += [str(one) for one in self.numbers]
         if self.number:
             parts.append("a finite number")
         if self.flag:
@@ -71,6 +73,8 @@ class Key:
             if self.nonzero:
                 option["not"] = {"const": 0}
             options.append(option)
+        if self.numbers:
+            options.append({"enum": list(self.numbers)})
         if self.number:
             options.append({"type": "number"})
         if self.flag:

@@ -33,6 +33,8 @@ class Language:
     """Whether a statement may be broken at any space; else only inside brackets."""
     default: bool
     """Whether routines are written in it where the specification does not say."""
+    lanes: bool
+    """Whether lanes need primitives, which ``lanes.j2`` writes."""
     runs: str
     """How routines are run here: ``cffi``, ``python``, or ``nothing``."""
     helpers: Mapping[str, tuple[str, ...]]
@@ -54,6 +56,7 @@ def _read(folder: Path) -> Language:
         pseudo=facts.get("pseudo", False),
         breaks_anywhere=facts["breaks_anywhere"],
         default=facts.get("default", False),
+        lanes=facts.get("lanes", False),
         runs=facts.get("runs", "nothing"),
         helpers={need: tuple(names) for need, names in facts.get("helpers", {}).items()},
     )

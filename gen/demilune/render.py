@@ -11,9 +11,10 @@ from collections.abc import Iterable
 from typing import Any
 
 from demilune import primitives
-from demilune.arithmetic import REAL_SIZE
 from demilune.contract import contract, file_head, title
+from demilune.dtypes import REAL_SIZE, lanes_of, real_of
 from demilune.expressions import ExpressionWriter, templates
+from demilune.isa import InstructionSet, pieces
 from demilune.languages import ALL, Language
 from demilune.plan.build import Plan
 from demilune.plan.tree import (
@@ -78,6 +79,8 @@ class _Renderer(ExpressionWriter):
         functions: dict[str, Function] = {}
         for plan in self.plans:
             functions.update({one.name: one for one in plan.routine.functions})
+        sets = self.plans[0].spec.target.instruction_sets
+        variants = [self._variant(isa, len(sets) > 1) for isa in sets]
         routines = [self._routine(plan) for plan in self.plans]
         written = [self._function(one) for one in functions.values()]
         types = self._types()
@@ -85,6 +88,8 @@ class _Renderer(ExpressionWriter):
             "file": self.file,
             "head": file_head(self.plans),
             "routines": routines,
+            "variants": variants,
+            "lanes_used": bool(self.primitives),
             "functions": written,
             "types": types,
             "sizes": REAL_SIZE,
@@ -100,11 +105,37 @@ class _Renderer(ExpressionWriter):
             result[f"{self.file}.{extension}"] = template.render(context).strip("\n") + "\n"
         return result
 
+    def _variant(self, isa: InstructionSet, several: bool) -> dict[str, Any]:
+        """The routines for one instruction set, and the primitives that they use."""
+        self.suffix = f"_{isa.name}" if several else ""
+        self.primitives = set()
+        routines = [self._routine(plan) for plan in self.plans]
+        types = [self._lanes_type(isa, type) for type in sorted({t for _, t in self.primitives})]
+        facts = {"title": isa.title, "target": isa.target, "header": isa.header}
+        facts |= {"at_run_time": isa.at_run_time, "suffix": self.suffix}
+        self.suffix = ""
+        return {**facts, "routines": routines, "types": types if self.language.lanes else []}
+
+    def _lanes_type(self, isa: InstructionSet, type: str) -> dict[str, Any]:
+        """A type with lanes: how many registers it is, and its primitives as text."""
+        real = real_of(type)
+        facts = {
+            "name": type + self.suffix, "real": real, "lanes": lanes_of(type),
+            "count": pieces(isa, type), "width": isa.lanes(real), "table": isa.tables[real],
+        }  # fmt: skip
+        names = sorted(name for name, one in self.primitives if one == type)
+        if not self.language.lanes:
+            return facts
+        macro = templates().get_template(f"{self.language.name}/lanes.j2").module
+        texts = [macro.primitive(facts, name) for name in names]  # type: ignore[attr-defined]
+        helpers = dict(isa.functions(real, "\n".join(texts)))
+        return {**facts, "primitives": texts, "functions": list(helpers.values())}
+
     def _types(self) -> list[str]:
         found = {one.type for plan in self.plans for one in plan.parameters if one.type != "size"}
         for plan in self.plans:
             for statement in walk(plan.routine.body):
-                found |= {v.type for value in values(statement) for v in leaves(value)}
+                found |= {real_of(v.type) for value in values(statement) for v in leaves(value)}
         return sorted(found)
 
     def _helpers(self) -> list[str]:
@@ -121,6 +152,7 @@ class _Renderer(ExpressionWriter):
         body += self._block(plan.routine.body, reports=_reports(plan), plan=plan)
         routine = {
             "name": plan.routine.name,
+            "arguments": ", ".join(n for p in plan.parameters for n in self._parameter(p)["names"]),
             "title": title(plan),
             "parameters": [self._parameter(one) for one in plan.parameters],
             "reports": _reports(plan),
@@ -146,7 +178,8 @@ class _Renderer(ExpressionWriter):
         """The head of a routine, broken where it is long."""
         parameters = [self._parameter(one) for one in plan.parameters]
         facts = {
-            "name": plan.routine.name, "reports": _reports(plan), "parameters": parameters,
+            "name": plan.routine.name + self.suffix, "reports": _reports(plan),
+            "parameters": parameters,
         }  # fmt: skip
         head = self.syntax["prototype"](facts) + ";"  # a declaration has one column more
         return "\n".join(self._broken(head, 0)).removesuffix(";")
@@ -192,7 +225,8 @@ class _Renderer(ExpressionWriter):
             return self._block(body, reports=reports, plan=plan, depth=depth + 1)
 
         if isinstance(one, Declare):
-            return s["declare"](one.name, self.value(one.value), one.type, one.changes)
+            type = one.type + (self.suffix if lanes_of(one.type) > 1 else "")
+            return s["declare"](one.name, self.value(one.value), type, one.changes)
         if isinstance(one, Assign):
             return s["assign"](one.name, self.value(one.value))
         if isinstance(one, Store):
@@ -221,6 +255,10 @@ class _Renderer(ExpressionWriter):
 
     def _store(self, one: Store) -> str:
         parts = len(one.number)
+        if lanes_of(one.type) > 1:
+            arguments = [*self.places(one), *map(self.value, one.number)]
+            name = "store" if parts == 1 else "store_pairs"
+            return self.syntax["statement"](self.primitive(name, one, arguments))
         places = [self.place(one.index, part if parts > 1 else None) for part in range(parts)]
         numbers = [self.value(value) for value in one.number]
         return self.syntax["store"](one.array, places, numbers, None, one.type)

@@ -15,6 +15,8 @@ from demilune.layouts import Diagonal, Group, Layout, Piece
 
 LARGEST_BLOCK = 16
 LARGEST_UNROLLED = 32
+LARGEST_STEPS = 8
+ALL = "all"
 
 
 @dataclass(frozen=True)
@@ -68,7 +70,10 @@ class Schedule:
     direction: str = key(
         "forward", "from the first strip to the last, or back", words=("forward", "backward")
     )
-    unroll: bool = key(False, "whether a small fixed n is written out without loops", flag=True)
+    unroll: int | str = key(
+        1, 'steps of an innermost loop written out in one pass; "all" writes out a small fixed n',
+        words=(ALL,), whole=True, minimum=1, maximum=LARGEST_STEPS,
+    )  # fmt: skip
 
     @property
     def order(self) -> LoopOrder:
@@ -79,8 +84,24 @@ class Schedule:
     def backward(self) -> bool:
         return self.direction == "backward"
 
+    @property
+    def written_out(self) -> bool:
+        """Whether the routine is written out without loops."""
+        return self.unroll == ALL
+
+    @property
+    def steps(self) -> int:
+        """Steps of an innermost loop in one pass."""
+        return 1 if self.unroll == ALL else int(self.unroll)
+
     def problems(
-        self, layout: Layout, operation: str, allowed: tuple[str, ...], why: str
+        self,
+        layout: Layout,
+        operation: str,
+        allowed: tuple[str, ...],
+        why: str,
+        lanes: int,
+        mirrored: bool,
     ) -> Iterator[tuple[str, str]]:
         """Pairs of a key and why its value cannot be, given the loop orders ``allowed``."""
         n, period = layout.n, layout.period
@@ -94,17 +115,27 @@ class Schedule:
             yield "block", f"a block of {self.block} strips is more than the matrix has, n = {n}"
         elif layout.grouped and self.block > period:
             yield "block", f"a block of {self.block} strips is more than a tile has, {period}"
-        if self.unroll and not (isinstance(n, int) and n <= LARGEST_UNROLLED):
+        if self.written_out and not (isinstance(n, int) and n <= LARGEST_UNROLLED):
             found = f"{n}" if isinstance(n, int) else f'"{n}"'
             yield (
                 "unroll",
                 (f"only a fixed n of at most {LARGEST_UNROLLED} is unrolled, not n = {found}"),
             )
-        elif self.unroll and not layout.known_shape:
+        elif self.written_out and not layout.known_shape:
             yield (
                 "unroll",
                 (
                     "the bounds of the strips are known only when the routine is called; leave "
-                    "unroll at false"
+                    "unroll at a number"
                 ),
             )
+        if lanes > 1 and self.backward:
+            yield "lanes", 'lanes go forward along a strip; use direction = "forward"'
+        if lanes > 1 and self.loop in allowed and self.order.mirrored and mirrored:
+            yield (
+                "lanes",
+                f'the loop order "{self.loop}" visits mirrored elements, which do not lie side by '
+                'side; use loop = "fused"',
+            )
+        if self.steps > 1 and self.backward:
+            yield "unroll", 'steps are written out with direction = "forward" only'

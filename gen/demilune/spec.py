@@ -15,7 +15,9 @@ from functools import cached_property
 from typing import Any
 
 from demilune.arithmetic import Arithmetic
+from demilune.dtypes import DTYPES
 from demilune.errors import Problem, SpecError
+from demilune.isa import NATIVE, PORTABLE, native
 from demilune.keys import Key, defaults_of, keys_of, nearest, pick
 from demilune.languages import LANGUAGES
 from demilune.layouts import LAYOUTS, Layout
@@ -112,6 +114,8 @@ def accepts(key: Key, value: Any) -> bool:
         return key.flag
     if isinstance(value, str):
         return key.text or value in key.words
+    if isinstance(value, int) and key.numbers:
+        return value in key.numbers
     if isinstance(value, int) and key.whole:
         above = key.minimum is None or value >= key.minimum
         below = key.maximum is None or value <= key.maximum
@@ -192,6 +196,10 @@ def make_spec(name: str, **values: Any) -> Spec:
         values["loop"] = operation.loops()[0]
     if values.get("accumulator") is None and values.get("dtype", "").startswith("int"):
         values["accumulator"] = INTEGER_ACCUMULATOR
+    if values.get("isa") == NATIVE:
+        values["isa"] = native().name
+    if "lanes" not in values and values.get("isa", PORTABLE) != PORTABLE:
+        values["lanes"] = lanes_for(values["isa"], values.get("dtype"))
     spec = Spec(
         name,
         pick(operation, values),
@@ -206,14 +214,22 @@ def make_spec(name: str, **values: Any) -> Spec:
     return spec
 
 
+def lanes_for(isa: str, dtype: str | None) -> int:
+    """The lanes that fill a register of an instruction set."""
+    type = Arithmetic().type if dtype is None else DTYPES[dtype]
+    return max(1, *(one.lanes(type.real) for one in Target(isa=isa).instruction_sets))
+
+
 def _together(spec: Spec) -> Iterator[tuple[str, str]]:
     """What does not go together."""
     yield from spec.layout.problems()
     yield from spec.operation.problems(spec.arithmetic)
     yield from spec.schedule.problems(
-        spec.layout, spec.operation.name, spec.operation.loops(), spec.operation.why
-    )
+        spec.layout, spec.operation.name, spec.operation.loops(), spec.operation.why,
+        spec.arithmetic.lanes, spec.operation.mirrored,
+    )  # fmt: skip
     yield from spec.arithmetic.problems()
+    yield from spec.target.problems(spec.arithmetic)
     if spec.layout.hermitian and not spec.arithmetic.type.complex:
         yield (
             "structure",

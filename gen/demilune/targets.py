@@ -1,10 +1,13 @@
-"""For which machine: language, environment, and the files that routines go to."""
+"""For which machine: language, environment, instruction set, and the files routines go to."""
 
 from __future__ import annotations
 
+from collections.abc import Iterator
 from dataclasses import dataclass
 
-from demilune.keys import key
+from demilune.arithmetic import Arithmetic
+from demilune.isa import INSTRUCTION_SETS, NATIVE, PORTABLE, InstructionSet, chosen_at_run_time
+from demilune.keys import RUNTIME, key
 from demilune.languages import LANGUAGES
 
 
@@ -17,6 +20,38 @@ class Target:
         "hosted", "hosted, or freestanding: no header but stdint.h and stddef.h",
         words=("hosted", "freestanding"),
     )  # fmt: skip
+    isa: str = key(
+        PORTABLE,
+        'instructions for lanes; "native" is the best of this machine, "runtime" holds several '
+        "and chooses when it is called",
+        words=(*INSTRUCTION_SETS, NATIVE, RUNTIME),
+    )
     file: str | None = key(
         None, "name of the file that routines share; else one for each", text=True
     )
+
+    @property
+    def instruction_sets(self) -> list[InstructionSet]:
+        """The sets that a file holds code for, the best first."""
+        return chosen_at_run_time() if self.isa == RUNTIME else [INSTRUCTION_SETS[self.isa]]
+
+    def problems(self, arithmetic: Arithmetic) -> Iterator[tuple[str, str]]:
+        """Pairs of a key and why its value cannot be."""
+        if self.isa == PORTABLE:
+            return
+        if self.language != "c":
+            yield "isa", f'vector instructions are for C; with "{self.language}" use "portable"'
+        elif self.environment == "freestanding":
+            yield "isa", 'vector instructions need their header; freestanding files are "portable"'
+        elif arithmetic.type.integer:
+            yield "isa", "vector instructions are for floating-point types"
+        elif arithmetic.accumulator == "plain":
+            for one in self.instruction_sets:
+                width = one.lanes(arithmetic.real)
+                if arithmetic.lanes % width:
+                    yield (
+                        "lanes",
+                        f'"{one.name}" has {width} lanes of {arithmetic.real} in a register; use '
+                        f"a multiple of {width}, not {arithmetic.lanes}",
+                    )
+                    return

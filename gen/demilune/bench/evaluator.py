@@ -14,11 +14,13 @@ from typing import Any
 import numpy as np
 import numpy.typing as npt
 
-from demilune.index import Choice, Compare, Element, Expr, Extreme, Quotient, Symbol
+from demilune.dtypes import lanes_of, real_of
+from demilune.index import Choice, Compare, Element, Expr, Extreme, Quotient, Symbol, expr
 from demilune.plan.build import Plan
 from demilune.plan.tree import (
     Assign,
     Binary,
+    Broadcast,
     Call,
     Comment,
     Constant,
@@ -27,6 +29,7 @@ from demilune.plan.tree import (
     Equals,
     Finish,
     Fma,
+    Fold,
     For,
     Function,
     If,
@@ -34,6 +37,7 @@ from demilune.plan.tree import (
     Load,
     Local,
     Negate,
+    Pack,
     Reject,
     Statement,
     Store,
@@ -82,6 +86,47 @@ def _fused64(left: float, right: float, addend: float) -> float:
         return float("inf") if exact > 0 else float("-inf")
 
 
+def take(
+    array: Lanes, lanes: int, index: int, stride: int, low: int, high: int, part: int
+) -> Lanes:
+    """Neighbouring elements, a lane each; 0 in the lanes before ``low`` and from ``high`` on."""
+    result = np.zeros((lanes, array.shape[2]), array.dtype)
+    for lane in range(low, high):
+        result[lane] = array[index + lane * stride, part]
+    return result
+
+
+def put(
+    array: Lanes, lanes: int, index: int, stride: int, low: int, high: int, part: int, value: Lanes
+) -> None:
+    """Writes lanes to neighbouring elements."""
+    value = _spread(lanes, value)
+    for lane in range(low, high):
+        array[index + lane * stride, part] = value[lane]
+
+
+def _spread(lanes: int, value: Lanes) -> Lanes:
+    """A value with an axis of lanes, which one number in all of them does not have yet."""
+    value = np.asarray(value)
+    return value if value.ndim == 2 else np.broadcast_to(value, (lanes, *value.shape))
+
+
+def fold(lanes: int, value: Lanes) -> Lanes:
+    """The sum over the lanes, by halves."""
+    value = _spread(lanes, value)
+    while len(value) > 1:
+        half = len(value) // 2
+        value = value[:half] + value[half:]
+    return np.asarray(value[0])
+
+
+def pack(lanes: int, values: tuple[Lanes, ...]) -> Lanes:
+    """One value a lane, and 0 in those that are left."""
+    given = np.stack(np.broadcast_arrays(*values))
+    rest = np.zeros((lanes - len(given), *given.shape[1:]), given.dtype)
+    return np.concatenate([given, rest])
+
+
 class Evaluator:
     """The arithmetic of one plan, ready to run.
 
@@ -102,7 +147,14 @@ class Evaluator:
         self._lines.append(f"def routine({', '.join(names)}):")
         self._block(plan.routine.body, 1)
         self._lines.append("    return None")
-        space: dict[str, Any] = {"np": np, "fused": fused}
+        space: dict[str, Any] = {
+            "np": np,
+            "fused": fused,
+            "take": take,
+            "put": put,
+            "fold": fold,
+            "pack": pack,
+        }
         code = compile("\n".join(self._lines), f"<evaluator of {plan.spec.name}>", "exec")
         exec(code, space)  # noqa: S102 - the text was made just above, from the plan alone
         self._routine: Callable[..., str | None] = space["routine"]
@@ -152,6 +204,9 @@ class Evaluator:
             for part, value in enumerate(one.number):
                 self._write(depth, f"part{part} = {_value(value)}")
             for part in range(len(one.number)):
+                if lanes_of(one.type) > 1:
+                    self._write(depth, f"put({_places(one)}, {part}, part{part})")
+                    continue
                 place = f"{one.array}[{_integer(one.index)}, {part}]"
                 self._write(depth, f"{place} = part{part}")
         elif isinstance(one, Call):
@@ -182,6 +237,19 @@ def _value(value: Value) -> str:
         return value.name
     if isinstance(value, Constant):
         return f"np.{value.type}({value.value!r})"
+    if isinstance(value, Load) and lanes_of(value.type) > 1:
+        return f"take({_places(value)}, {value.part or 0})"
+    if isinstance(value, Broadcast):
+        return _value(value.operand)
+    if isinstance(value, Pack):
+        operands = "".join(f"{_value(one)}, " for one in value.operands)
+        return f"pack({lanes_of(value.type)}, ({operands}))"
+    if isinstance(value, Fold):
+        lanes = lanes_of(value.operands[0].type)
+        sums = "".join(f"fold({lanes}, {_value(one)}), " for one in value.operands)
+        if lanes_of(value.type) == 1:
+            return f"({sums})[0]"
+        return f"pack({lanes_of(value.type)}, ({sums}))"
     if isinstance(value, Load):
         return f"{value.array}[{_integer(value.index)}, {value.part or 0}]"
     if isinstance(value, Binary):
@@ -191,7 +259,14 @@ def _value(value: Value) -> str:
     if isinstance(value, Fma):
         return f"fused({_value(value.left)}, {_value(value.right)}, {_value(value.addend)})"
     assert isinstance(value, Convert)
-    return f"{_value(value.operand)}.astype(np.{value.type})"
+    return f"{_value(value.operand)}.astype(np.{real_of(value.type)})"
+
+
+def _places(one: Load | Store) -> str:
+    lanes = lanes_of(one.type)
+    low, high = one.active or (expr(0), expr(lanes))
+    parts = (_integer(one.index), _integer(one.stride), _integer(low), _integer(high))
+    return f"{one.array}, {lanes}, {', '.join(parts)}"
 
 
 def _condition(condition: Compare | Equals) -> str:

@@ -10,7 +10,6 @@ from typing import Any
 
 import numpy as np
 
-from demilune.arithmetic import REAL_DIGITS
 from demilune.bench import guard, isolation
 from demilune.bench.evaluator import Evaluator
 from demilune.bench.problem import (
@@ -33,6 +32,7 @@ from demilune.bench.problem import (
 )
 from demilune.bench.reference import errors, numpy_product
 from demilune.bench.run import arguments_of, differences, foretell, run_case
+from demilune.dtypes import REAL_DIGITS
 from demilune.keys import RUNTIME
 from demilune.plan.build import Plan
 from demilune.toolchain.executables import CExecutable, Executable

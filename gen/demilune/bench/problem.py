@@ -15,7 +15,7 @@ from typing import Any
 import numpy as np
 import numpy.typing as npt
 
-from demilune.arithmetic import REALS
+from demilune.dtypes import REALS
 from demilune.keys import RUNTIME
 from demilune.plan.build import Plan
 from demilune.plan.tree import Parameter

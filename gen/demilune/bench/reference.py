@@ -12,8 +12,8 @@ from typing import Any
 
 import numpy as np
 
-from demilune.arithmetic import REAL_DIGITS
 from demilune.bench.problem import PAD, Lanes, Problem, places, stored
+from demilune.dtypes import REAL_DIGITS
 from demilune.operations.base import sizes
 
 

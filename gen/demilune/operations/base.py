@@ -8,18 +8,19 @@ An operation never sees an index formula and never decides an order.
 
 from __future__ import annotations
 
-from collections.abc import Iterator, Mapping
-from dataclasses import dataclass, field
+from collections.abc import Callable, Iterator, Mapping
+from dataclasses import dataclass, field, replace
 from math import isfinite
 from typing import Any, ClassVar
 
 import numpy as np
 
-from demilune.arithmetic import REAL_SIZE, Arithmetic, conjugate, convert, negate
-from demilune.index import Compare, Expr, Term, choice, expr, symbol
+from demilune.arithmetic import Arithmetic, conjugate, convert, negate, spread
+from demilune.dtypes import REAL_SIZE, with_lanes
+from demilune.index import Compare, Expr, Term, choice, expr, quotient, symbol
 from demilune.keys import RUNTIME, key
 from demilune.layouts import Layout
-from demilune.plan.tree import Constant, Load, Local, Number, Parameter
+from demilune.plan.tree import ONE, Active, Constant, Fold, Load, Local, Number, Pack, Parameter
 from demilune.plan.writer import PARTS, Writer
 from demilune.schedules import LOOP_ORDERS, LoopOrder
 
@@ -34,7 +35,11 @@ class Strip:
     k: Expr
     factor: Number = ()
     sum: Number = ()
+    sum_from: Number = ()
+    """What the sum starts at."""
     diagonal: Number = ()
+    active: Active = None
+    """The lanes of a step in which the strip has elements; None is all that the step has."""
 
 
 @dataclass(frozen=True)
@@ -62,6 +67,12 @@ class Context:
     vectors: dict[str, Vector] = field(default_factory=dict)
     totals: Number = ()
     """A running sum over all strips, of an operation that has one."""
+    lane_totals: Number = ()
+    """The same, a sum a lane."""
+    lanes: int = 1
+    """How many neighbouring elements are worked on at a time, from the index that is named."""
+    active: Active = None
+    """The lanes that have an element; None is all."""
 
     @property
     def n(self) -> Expr:
@@ -71,35 +82,107 @@ class Context:
     def parts(self) -> int:
         return self.arithmetic.type.parts
 
-    def load(self, array: str, index: Expr, type: str, complex: bool) -> Number:
-        """The element of an array, as a number."""
-        if not complex:
-            return (Load(array, index, type),)
-        return tuple(Load(array, index, type, part) for part in (0, 1))
+    def wide(self, active: Active = None) -> Context:
+        """The context in which a step works on all lanes, or on the ``active`` ones."""
+        return replace(self, lanes=self.arithmetic.lanes, active=active)
 
-    def matrix(self, index: Expr) -> Number:
+    def each(
+        self,
+        low: Term,
+        high: Term,
+        body: Callable[[Context, Expr], None],
+        *,
+        name: str = "i",
+        steps: int = 1,
+        backward: bool = False,
+    ) -> None:
+        """``body`` for every index: lanes at a time, ``steps`` written out in one pass.
+
+        What is left at the end is one step with the lanes that are left.
+        """
+        w, lanes = self.w, self.arithmetic.lanes
+        low, high = expr(low), expr(high)
+        here = self.wide() if lanes > 1 else self
+        for count in (steps, 1) if steps > 1 else (1,):
+            size = count * lanes
+
+            def some(i: Expr, count: int = count) -> None:
+                for step in range(count):
+                    body(here, i + step * lanes)
+
+            whole = low + size * quotient(high - low, divisor=size) if size > 1 else high
+            whole = whole if whole.constant is not None else w.integer("whole", whole)
+            w.loop(name, low, whole, some, step=size, backward=backward)
+            low = whole
+        if lanes > 1:
+            rest = self.wide((expr(0), high - low))
+            w.when_known(Compare(low, "<", high), lambda: body(rest, low))
+
+    def spread(self, number: Number) -> Number:
+        """The number in every lane of a step."""
+        return tuple(spread(one, with_lanes(one.type, self.lanes)) for one in number)
+
+    def folded(self, *sums: Number) -> Number:
+        """The sums over all lanes: of one number, or of several as one a lane."""
+        real = self.arithmetic.sums
+        type = real if len(sums) == 1 else with_lanes(real, self.arithmetic.lanes)
+        return tuple(Fold(parts, type) for parts in zip(*sums, strict=True))
+
+    def load(
+        self,
+        array: str,
+        index: Expr,
+        type: str,
+        complex: bool,
+        stride: Expr = ONE,
+        active: Active = None,
+    ) -> Number:
+        """The element of an array, as a number; in a wide context those from ``index`` on."""
+        parts = (0, 1) if complex else (None,)
+        if self.lanes == 1:
+            return tuple(Load(array, index, type, part) for part in parts)
+        type, active = with_lanes(type, self.lanes), active or self.active
+        return tuple(Load(array, index, type, part, stride, active) for part in parts)
+
+    def matrix(self, index: Expr, active: Active = None) -> Number:
         """The stored element at ``index``, in the type of the sums."""
         a = self.arithmetic
-        return convert(self.load("a", index, a.real, a.type.complex), a.sums)
+        return convert(self.load("a", index, a.real, a.type.complex, ONE, active), a.sums)
 
-    def on_diagonal(self, index: Expr) -> Number:
-        """The diagonal element at ``index``; of a Hermitian matrix only its real part is read."""
-        number = self.matrix(index)
-        return number[:1] if self.layout.hermitian else number
+    def on_diagonal(self, *places: Expr) -> Number:
+        """The diagonal element at a place; of a Hermitian matrix only its real part is read.
 
-    def vector(self, name: str, i: Term) -> Number:
+        Several places give an element a lane.
+        """
+        narrow = replace(self, lanes=1, active=None)
+        numbers = [narrow.matrix(place) for place in places]
+        parts = 1 if self.layout.hermitian else self.parts
+        if self.lanes == 1:
+            return numbers[0][:parts]
+        type = with_lanes(self.arithmetic.sums, self.lanes)
+        return tuple(Pack(tuple(number[part] for number in numbers), type) for part in range(parts))
+
+    def vector(self, name: str, i: Term, active: Active = None) -> Number:
         """Element ``i`` of a vector, in its own type."""
         v = self.vectors[name]
-        return self.load(v.array, v.at(i), v.type, v.complex)
+        return self.load(v.array, v.at(i), v.type, v.complex, v.stride, active)
 
-    def term(self, name: str, i: Term) -> Number:
+    def term(self, name: str, i: Term, active: Active = None) -> Number:
         """Element ``i`` of a vector, in the type of the sums."""
-        return convert(self.vector(name, i), self.arithmetic.sums)
+        return convert(self.vector(name, i, active), self.arithmetic.sums)
+
+    def term_for(self, strip: Strip, name: str, i: Term, known: Number) -> Number:
+        """Element ``i`` of a vector, ``known`` unless the strip has other lanes than the step."""
+        return known if strip.active is None else self.term(name, i, strip.active)
 
     def put(self, name: str, i: Term, number: Number) -> None:
         """Writes element ``i`` of a vector, rounded to its type."""
         v = self.vectors[name]
-        self.w.store(v.array, v.at(i), convert(number, v.type))
+        number = convert(number, v.type)
+        if self.lanes == 1:
+            self.w.store(v.array, v.at(i), number)
+        else:
+            self.w.store(v.array, v.at(i), number, v.stride, self.active)
 
     def in_row(self, number: Number, own: bool) -> Number:
         """A(k,m) from the element that is stored for it; ``own`` if it lies in strip k."""
@@ -117,7 +200,7 @@ class Context:
     @property
     def reused(self) -> bool:
         """Whether a number is used more than once in one step, and so belongs in a local."""
-        return self.parts > 1 or self.arithmetic.compensated
+        return self.parts > 1 or self.arithmetic.compensated or self.lanes > 1
 
 
 @dataclass(frozen=True)
@@ -173,8 +256,8 @@ class Operation:
         """The off-diagonal elements of some rows that meet index m, each with its place."""
         raise NotImplementedError
 
-    def diagonal(self, c: Context, strip: Strip, place: Expr) -> None:
-        """The diagonal element of a strip."""
+    def diagonal(self, c: Context, strip: Strip, *places: Expr) -> None:
+        """The diagonal element of a strip; in a wide context those of the strips from it on."""
         raise NotImplementedError
 
     def close(self, c: Context, strip: Strip) -> None:

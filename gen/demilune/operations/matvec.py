@@ -128,13 +128,13 @@ class MatVec(Operation):
         nought = convert(c.arithmetic.zero(c.parts)[: c.parts], c.vectors["y"].type)
 
         def clear() -> None:
-            c.w.loop("i", 0, c.n, lambda i: c.put(y, i, nought))
+            c.each(0, c.n, lambda c, i: c.put(y, i, c.spread(nought)))
 
         def multiply() -> None:
-            def one(i: Expr) -> None:
+            def one(c: Context, i: Expr) -> None:
                 c.put(y, i, scaled(c, beta, self._term(c, i)))
 
-            c.w.loop("i", 0, c.n, one)
+            c.each(0, c.n, one)
 
         def unless_one() -> None:
             c.w.when_equal(beta, 1, lambda: None, multiply)
@@ -157,7 +157,8 @@ class MatVec(Operation):
                 x = scaled(c, alpha, x)
             strip.factor = c.w.bind("t", x)
         if c.order.gather:
-            strip.sum = c.w.running("acc", c.arithmetic.zero(c.parts), c.parts)
+            strip.sum_from = c.arithmetic.zero(c.parts)
+            strip.sum = c.w.running("acc", strip.sum_from, c.parts)
         return strip
 
     def element(self, c: Context, m: Expr, strips: list[tuple[Strip, Expr]], own: bool) -> None:
@@ -169,7 +170,7 @@ class MatVec(Operation):
         if order.scatter and several:
             cell = w.running("cell", self._cell(c, m), c.parts)
         for strip, place in strips:
-            stored = c.matrix(place)
+            stored = c.matrix(place, strip.active)
             if c.reused or (order.gather and order.scatter):
                 stored = w.bind("akm", stored)
             if order.scatter:
@@ -179,13 +180,13 @@ class MatVec(Operation):
                 else:
                     self._add_to(c, m, column, strip.factor)
             if order.gather:
-                row = c.in_row(stored, own)
-                w.assign(strip.sum, a.accumulate(w, strip.sum, row, x))
+                row, right = c.in_row(stored, own), c.term_for(strip, "x", m, x)
+                w.assign(strip.sum, a.accumulate(w, strip.sum, row, right))
         if order.scatter and several:
             self._keep(c, m, cell)
 
-    def diagonal(self, c: Context, strip: Strip, place: Expr) -> None:
-        d = c.on_diagonal(place)
+    def diagonal(self, c: Context, strip: Strip, *places: Expr) -> None:
+        d = c.on_diagonal(*places)
         if c.reused:
             d = c.w.bind("akk", d)
         if c.order.gather:

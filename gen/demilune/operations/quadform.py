@@ -8,7 +8,7 @@ from typing import Any, ClassVar
 
 import numpy as np
 
-from demilune.arithmetic import Arithmetic, conjugate, convert
+from demilune.arithmetic import Arithmetic, add, conjugate, convert
 from demilune.index import Expr, expr
 from demilune.layouts import Layout
 from demilune.operations.base import Context, Operation, Strip
@@ -52,22 +52,26 @@ class QuadForm(Operation):
     def prologue(self, c: Context) -> None:
         self.name_vector(c, "x", c.arithmetic.real)
         parts = self._parts(c)
-        c.totals = c.w.running("sum", c.arithmetic.zero(parts), parts)
+        zero = c.arithmetic.zero(parts)
+        c.totals = c.w.running("sum", zero, parts)
+        if c.arithmetic.lanes > 1:
+            c.lane_totals = c.w.running("sums", c.wide().spread(zero), parts)
 
     def open(self, c: Context, k: Expr) -> Strip:
-        return Strip(k, sum=c.w.running("acc", c.arithmetic.zero(c.parts), c.parts))
+        zero = c.arithmetic.zero(c.parts)
+        return Strip(k, sum=c.w.running("acc", zero, c.parts), sum_from=zero)
 
     def element(self, c: Context, m: Expr, strips: list[tuple[Strip, Expr]], own: bool) -> None:
         x = c.term("x", m)
         x = c.w.bind("xm", x) if len(strips) > 1 or c.reused else x
         for strip, place in strips:
-            stored = c.matrix(place)
+            stored = c.matrix(place, strip.active)
             stored = c.w.bind("akm", stored) if c.reused else stored
-            row = c.in_row(stored, own)
-            c.w.assign(strip.sum, c.arithmetic.accumulate(c.w, strip.sum, row, x))
+            row, right = c.in_row(stored, own), c.term_for(strip, "x", m, x)
+            c.w.assign(strip.sum, c.arithmetic.accumulate(c.w, strip.sum, row, right))
 
-    def diagonal(self, c: Context, strip: Strip, place: Expr) -> None:
-        d = c.w.bind("akk", c.on_diagonal(place))
+    def diagonal(self, c: Context, strip: Strip, *places: Expr) -> None:
+        d = c.w.bind("akk", c.on_diagonal(*places))
         if not c.order.mirrored:
             strip.diagonal = d
             return
@@ -83,10 +87,13 @@ class QuadForm(Operation):
             twice = w.bind("twice", a.doubled(row), c.parts)
             row = w.bind("row", a.accumulate(w, twice, strip.diagonal, x), c.parts)
         left = conjugate(x) if c.layout.hermitian else x
-        w.assign(c.totals, a.accumulate_sum(w, c.totals, left, row))
+        totals = c.lane_totals if c.lanes > 1 else c.totals
+        w.assign(totals, a.accumulate_sum(w, totals, left, row))
 
     def epilogue(self, c: Context) -> None:
         total = convert(c.arithmetic.total(c.totals), c.arithmetic.result)
+        if c.arithmetic.lanes > 1:
+            total = add(c.folded(c.lane_totals), total)
         c.w.store("s", expr(0), total)
 
     def statement(self, c: Context, backward: bool, block: int) -> tuple[str, ...]:

@@ -83,15 +83,17 @@ class RankOne(Operation):
 
     def element(self, c: Context, m: Expr, strips: list[tuple[Strip, Expr]], own: bool) -> None:
         x = c.term("x", m)
-        if len(strips) > 1 or c.parts > 1:
+        if len(strips) > 1 or c.reused:
             x = c.w.bind("xm", x)
         if c.layout.hermitian and not self._columns(c):
             x = conjugate(x)
         for strip, place in strips:
-            total = c.arithmetic.multiply_add(c.matrix(place), x, strip.factor)
-            c.w.store("a", place, convert(total, c.arithmetic.real))
+            active = strip.active or c.active
+            total = c.arithmetic.multiply_add(c.matrix(place, active), x, strip.factor)
+            c.w.store("a", place, convert(total, c.arithmetic.real), active=active)
 
-    def diagonal(self, c: Context, strip: Strip, place: Expr) -> None:
+    def diagonal(self, c: Context, strip: Strip, *places: Expr) -> None:
+        (place,) = places
         x = c.term("x", strip.k)
         x = c.w.bind("xk", x) if c.parts > 1 else x
         if c.layout.hermitian and not self._columns(c):

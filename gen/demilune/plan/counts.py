@@ -8,13 +8,13 @@ as general (neither 0 nor 1).
 from __future__ import annotations
 
 from collections import Counter
-from collections.abc import Mapping
+from collections.abc import Iterator, Mapping
 from contextlib import suppress
 from dataclasses import dataclass, field
 from fractions import Fraction
 from typing import Any
 
-from demilune.arithmetic import REAL_SIZE
+from demilune.dtypes import REAL_SIZE, lanes_of, real_of
 from demilune.index import Compare
 from demilune.plan.build import Plan
 from demilune.plan.tree import (
@@ -26,6 +26,7 @@ from demilune.plan.tree import (
     Equals,
     Finish,
     Fma,
+    Fold,
     For,
     Function,
     If,
@@ -106,11 +107,11 @@ def _deepest(body: tuple[Statement, ...]) -> int:
     here, inside = 0, 0
     for one in body:
         if isinstance(one, Declare):
-            here += REAL_SIZE[one.type]
+            here += REAL_SIZE[real_of(one.type)] * lanes_of(one.type)
         elif isinstance(one, Integer):
             here += 8
         elif isinstance(one, Call):
-            here += len(one.targets) * REAL_SIZE[one.type]
+            here += len(one.targets) * REAL_SIZE[real_of(one.type)]
         elif isinstance(one, For):
             inside = max(inside, 8 + _deepest(one.body))
         elif isinstance(one, If):
@@ -149,7 +150,7 @@ class _Counter:
         elif isinstance(one, Finish):
             raise _Done
         else:
-            total.add(self._counted(one))
+            total.add(self._counted(one, env))
 
     def _holds(self, condition: Compare | Equals, env: Mapping[str, Any]) -> bool:
         if isinstance(condition, Compare):
@@ -160,12 +161,15 @@ class _Counter:
         low, high = one.low.value(env), one.high.value(env)
         passes = range(low, high, one.step)
         if id(one) not in self._flat_loops:
-            flat = all(not isinstance(inner, For | If | Finish) for inner in walk(one.body))
+            flat = all(
+                not isinstance(inner, For | If | Finish) and not _varies(inner)
+                for inner in walk(one.body)
+            )
             body = Counts() if flat else None
             if body is not None:
                 for inner in one.body:
                     if not isinstance(inner, Integer):
-                        body.add(self._counted(inner))
+                        body.add(self._counted(inner, env))
             self._flat_loops[id(one)] = body
         known = self._flat_loops[id(one)]
         if known is not None:
@@ -175,33 +179,58 @@ class _Counter:
             env[one.variable] = value
             self._block(one.body, env, total)
 
-    def _counted(self, one: Statement) -> Counts:
+    def _counted(self, one: Statement, env: Mapping[str, Any]) -> Counts:
+        if _varies(one):
+            return self._flat(one, env)
         if id(one) not in self._statements:
-            self._statements[id(one)] = self._flat(one)
+            self._statements[id(one)] = self._flat(one, env)
         return self._statements[id(one)]
 
-    def _flat(self, one: Statement) -> Counts:
+    def _flat(self, one: Statement, env: Mapping[str, Any]) -> Counts:
         result = Counts()
         for value in values(one):
             for leaf in leaves(value):
+                lanes = lanes_of(leaf.type)
                 if isinstance(leaf, Load):
                     if leaf.part != 1:  # both parts of a complex element are one load
-                        result.loads[leaf.array] += 1
+                        result.loads[leaf.array] += _elements(leaf, env)
                 elif isinstance(leaf, Binary):
-                    result.operations[leaf.operator] += 1
+                    result.operations[leaf.operator] += lanes
                 elif isinstance(leaf, Fma):
-                    result.operations["fma"] += 1
+                    result.operations["fma"] += lanes
                 elif isinstance(leaf, Negate):
-                    result.operations["negate"] += 1
+                    result.operations["negate"] += lanes
                 elif isinstance(leaf, Convert):
-                    result.operations["convert"] += 1
+                    result.operations["convert"] += lanes
+                elif isinstance(leaf, Fold):
+                    result.operations["+"] += sum(lanes_of(p.type) - 1 for p in leaf.operands)
         if isinstance(one, Store):
-            result.stores[one.array] += 1
+            result.stores[one.array] += _elements(one, env)
         if isinstance(one, Call):
             for inner in self.functions[one.function].body:
                 if isinstance(inner, Declare | Assign):
-                    result.add(self._flat(inner))
+                    result.add(self._flat(inner, env))
         return result
+
+
+def _places(one: Statement) -> Iterator[Load | Store]:
+    """What the statement loads and stores."""
+    if isinstance(one, Store):
+        yield one
+    for value in values(one):
+        yield from (leaf for leaf in leaves(value) if isinstance(leaf, Load))
+
+
+def _varies(one: Statement) -> bool:
+    """Whether the number of lanes that are loaded or stored depends on integers."""
+    return any(end.constant is None for place in _places(one) for end in place.active or ())
+
+
+def _elements(one: Load | Store, env: Mapping[str, Any]) -> int:
+    """The elements that are loaded or stored."""
+    if one.active is None:
+        return lanes_of(one.type)
+    return max(0, one.active[1].value(env) - one.active[0].value(env))
 
 
 def polynomial(points: Mapping[int, int]) -> tuple[Fraction, Fraction, Fraction] | None:

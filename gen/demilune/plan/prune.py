@@ -57,9 +57,9 @@ def _reads(one: Statement) -> set[str]:
             if isinstance(leaf, Local):
                 names.add(leaf.name)
             elif isinstance(leaf, Load):
-                names |= leaf.index.names
+                names |= leaf.names
     if isinstance(one, Store):
-        names |= one.index.names
+        names |= one.names
     elif isinstance(one, Integer):
         names |= one.value.names
     elif isinstance(one, If | Reject) and isinstance(one.condition, Compare):

@@ -4,22 +4,25 @@ from __future__ import annotations
 
 from collections.abc import Callable
 from dataclasses import dataclass, replace
-from typing import TypeAlias
+from typing import Any, TypeAlias
 
 from demilune.index import Compare, Expr
 from demilune.plan.tree import (
     Assign,
     Binary,
+    Broadcast,
     Call,
     Convert,
     Declare,
     Equals,
     Fma,
+    Fold,
     For,
     If,
     Integer,
     Load,
     Negate,
+    Pack,
     Reject,
     Statement,
     Store,
@@ -50,7 +53,7 @@ class Rewriter:
             return replace(one, value=self._value(one.value))
         if isinstance(one, Store):
             number = tuple(self._value(value) for value in one.number)
-            return replace(one, number=number, index=self.integer(one.index))
+            return replace(one, number=number, **self._places(one))
         if isinstance(one, Call):
             return replace(one, arguments=tuple(self._value(v) for v in one.arguments))
         if isinstance(one, Integer):
@@ -65,6 +68,11 @@ class Rewriter:
             return replace(one, condition=self._condition(one.condition))
         return one
 
+    def _places(self, one: Load | Store) -> dict[str, Any]:
+        active = one.active and (self.integer(one.active[0]), self.integer(one.active[1]))
+        index, stride = self.integer(one.index), self.integer(one.stride)
+        return {"index": index, "stride": stride, "active": active}
+
     def _condition(self, one: Compare | Equals) -> Compare | Equals:
         if isinstance(one, Compare):
             return replace(one, left=self.integer(one.left), right=self.integer(one.right))
@@ -72,13 +80,15 @@ class Rewriter:
 
     def _value(self, one: Value) -> Value:
         if isinstance(one, Load):
-            return self.value(replace(one, index=self.integer(one.index)))
+            return self.value(replace(one, **self._places(one)))
         if isinstance(one, Binary):
             left, right = self._value(one.left), self._value(one.right)
             return self.value(replace(one, left=left, right=right))
         if isinstance(one, Fma):
             left, right = self._value(one.left), self._value(one.right)
             return self.value(Fma(left, right, self._value(one.addend), one.type))
-        if isinstance(one, Negate | Convert):
+        if isinstance(one, Pack | Fold):
+            return self.value(replace(one, operands=tuple(map(self._value, one.operands))))
+        if isinstance(one, Negate | Convert | Broadcast):
             return self.value(replace(one, operand=self._value(one.operand)))
         return self.value(one)

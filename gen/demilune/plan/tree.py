@@ -2,8 +2,8 @@
 
 Values are real: a complex number is a pair of them, so that the order of its arithmetic is in
 the tree and not left to a language. Every value has a type, one of ``float32``, ``float64``,
-``int16``, ``int32`` and ``int64``; both operands of an operation have the type of its result,
-and only :class:`Convert` changes a type.
+``int16``, ``int32`` and ``int64``, or so many lanes of one, such as ``float64x4``; both operands
+of an operation have the type of its result, and only :class:`Convert` changes a real type.
 """
 
 from __future__ import annotations
@@ -12,7 +12,11 @@ from collections.abc import Iterator
 from dataclasses import dataclass, field, replace
 from typing import TypeAlias
 
-from demilune.index import Compare, Expr
+from demilune.index import Compare, Expr, expr
+
+ONE = expr(1)
+Active: TypeAlias = tuple[Expr, Expr] | None
+"""Lanes from the first number to before the second; None is all of them."""
 
 # --- values ------------------------------------------------------------------------------
 
@@ -35,12 +39,23 @@ class Local:
 
 @dataclass(frozen=True)
 class Load:
-    """The element ``index`` of ``array``; of a complex array its real (0) or imaginary part (1)."""
+    """The element ``index`` of ``array``; of a complex array its real (0) or imaginary part (1).
+
+    A type with lanes loads as many elements, ``stride`` apart. With ``active``, only the lanes
+    from its first number to before its second are read; the others are 0.
+    """
 
     array: str
     index: Expr
     type: str
     part: int | None = None
+    stride: Expr = ONE
+    active: Active = None
+
+    @property
+    def names(self) -> frozenset[str]:
+        """The integers that the places depend on."""
+        return _names(self.index, self.stride, *(self.active or ()))
 
 
 @dataclass(frozen=True)
@@ -79,7 +94,36 @@ class Convert:
     type: str
 
 
-Value: TypeAlias = Constant | Local | Load | Binary | Negate | Fma | Convert
+@dataclass(frozen=True)
+class Broadcast:
+    """One number in every lane."""
+
+    operand: Value
+    type: str
+
+
+@dataclass(frozen=True)
+class Pack:
+    """Numbers beside each other, one a lane; the lanes that are left are 0."""
+
+    operands: tuple[Value, ...]
+    type: str
+
+
+@dataclass(frozen=True)
+class Fold:
+    """The sums over the lanes of the operands: one number, or one a lane and 0 in those left.
+
+    Each is added up by halves: lane l and lane l + half, until one is left.
+    """
+
+    operands: tuple[Value, ...]
+    type: str
+
+
+Value: TypeAlias = (
+    Constant | Local | Load | Binary | Negate | Fma | Convert | Broadcast | Pack | Fold
+)
 Number: TypeAlias = tuple[Value, ...]
 """One value, or the real and the imaginary part."""
 
@@ -140,12 +184,22 @@ class Assign:
 
 @dataclass(frozen=True)
 class Store:
-    """Writes an element; all parts of ``number`` are computed before the first is written."""
+    """Writes an element; all parts of ``number`` are computed before the first is written.
+
+    A type with lanes writes as many elements, ``stride`` apart, or the ``active`` ones.
+    """
 
     array: str
     index: Expr
     number: Number
     type: str
+    stride: Expr = ONE
+    active: Active = None
+
+    @property
+    def names(self) -> frozenset[str]:
+        """The integers that the places depend on."""
+        return _names(self.index, self.stride, *(self.active or ()))
 
 
 @dataclass(frozen=True)
@@ -256,6 +310,10 @@ class Routine:
         return replace(self, name=name)
 
 
+def _names(*integers: Expr) -> frozenset[str]:
+    return frozenset().union(*(one.names for one in integers))
+
+
 def nested(statement: Statement) -> tuple[tuple[Statement, ...], ...]:
     """The blocks of statements directly inside ``statement``."""
     if isinstance(statement, For):
@@ -286,8 +344,10 @@ def operands(value: Value) -> tuple[Value, ...]:
         return (value.left, value.right)
     if isinstance(value, Fma):
         return (value.left, value.right, value.addend)
-    if isinstance(value, Negate | Convert):
+    if isinstance(value, Negate | Convert | Broadcast):
         return (value.operand,)
+    if isinstance(value, Pack | Fold):
+        return value.operands
     return ()
 
 

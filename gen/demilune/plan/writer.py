@@ -10,8 +10,10 @@ from collections.abc import Callable, Iterator
 from contextlib import contextmanager
 from dataclasses import replace
 
-from demilune.index import Expr, Symbol, Term, expr, symbol
+from demilune.index import Compare, Expr, Symbol, Term, expr, symbol
 from demilune.plan.tree import (
+    ONE,
+    Active,
     Assign,
     Call,
     Comment,
@@ -139,8 +141,15 @@ class Writer:
         self.write(Call(function.name, arguments, targets, function.type))
         return tuple(Local(name, function.type) for name in targets)
 
-    def store(self, array: str, index: Expr, number: Number) -> None:
-        self.write(Store(array, index, number, number[0].type))
+    def store(
+        self,
+        array: str,
+        index: Expr,
+        number: Number,
+        stride: Expr = ONE,
+        active: Active = None,
+    ) -> None:
+        self.write(Store(array, index, number, number[0].type, stride, active))
 
     # --- control ---------------------------------------------------------------------------
 
@@ -169,6 +178,13 @@ class Writer:
             body(symbol(name))
         if statements:
             self.write(For(name, low, high, tuple(statements), step, backward))
+
+    def when_known(self, condition: Compare, then: Callable[[], None]) -> None:
+        """``then`` where the condition holds; decided now where that can be told."""
+        if condition.known is None:
+            self.when(condition, then)
+        elif condition.known:
+            then()
 
     def when(
         self,

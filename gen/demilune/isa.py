@@ -1,0 +1,124 @@
+"""Instruction sets with vector registers: one table of primitives each, found by being there.
+
+A file ``templates/c/isa/<name>.toml`` tells what a register is and how one is loaded, added,
+multiplied and folded; lanes of a plan become as many registers as they need. The order of
+arithmetic is the plan's, so that the same lanes give the same bits with every table.
+"""
+
+from __future__ import annotations
+
+import platform
+import re
+import tomllib
+from collections.abc import Iterator, Mapping
+from dataclasses import dataclass, field
+from functools import cache
+from pathlib import Path
+from typing import Any
+
+from demilune.dtypes import lanes_of, real_of
+from demilune.languages import TEMPLATES
+
+PORTABLE = "portable"
+NATIVE = "native"
+"""The best of this machine, resolved when a specification is read."""
+
+
+@dataclass(frozen=True)
+class InstructionSet:
+    """A table of primitives for one kind of vector register."""
+
+    name: str
+    title: str
+    rank: int
+    """Among those of one machine, the widest is the highest."""
+    machines: tuple[str, ...]
+    """Machines that may have it, as :func:`platform.machine` calls them; none is all."""
+    flags: tuple[str, ...]
+    """What the processor must have, as Linux lists it."""
+    target: str
+    """What compilers are told, so that files need no option."""
+    header: str
+    at_run_time: str
+    """The condition in C under which this machine has it."""
+    tables: Mapping[str, Mapping[str, Any]] = field(compare=False, repr=False)
+    """The primitives by real type."""
+
+    def lanes(self, real: str) -> int:
+        """Lanes of one register."""
+        return int(self.tables[real]["width"]) if real in self.tables else 1
+
+    @property
+    def here(self) -> bool:
+        """Whether this machine can run it, as far as can be told."""
+        if self.machines and platform.machine() not in self.machines:
+            return False
+        return set(self.flags) <= processor_flags()
+
+    def functions(self, real: str, text: str) -> Iterator[tuple[str, str]]:
+        """The helper functions that ``text`` calls, each after those it calls itself."""
+        helpers: Mapping[str, str] = self.tables[real].get("functions", {})
+        called = [name for name in helpers if re.search(rf"\b{name}\(", text)]
+        inner = {
+            pair[0]: pair for name in called
+            for pair in self.functions(real, helpers[name].replace(f" {name}(", ""))
+        }  # fmt: skip
+        yield from inner.values()
+        yield from ((name, helpers[name].strip("\n")) for name in called if name not in inner)
+
+
+@cache
+def processor_flags() -> frozenset[str]:
+    """What Linux says this processor has; nothing elsewhere."""
+    try:
+        text = Path("/proc/cpuinfo").read_text(encoding="ascii", errors="ignore")
+    except OSError:
+        return frozenset()
+    found = re.search(r"^(?:flags|Features)\s*:(.*)$", text, re.MULTILINE)
+    return frozenset(found[1].split()) if found else frozenset()
+
+
+def _read(path: Path) -> InstructionSet:
+    facts = tomllib.loads(path.read_text(encoding="utf-8"))
+    return InstructionSet(
+        name=path.stem,
+        title=facts["title"],
+        rank=facts["rank"],
+        machines=tuple(facts["machines"]),
+        flags=tuple(facts["flags"]),
+        target=facts["target"],
+        header=facts["header"],
+        at_run_time=facts["at_run_time"],
+        tables={name: table for name, table in facts.items() if isinstance(table, dict)},
+    )
+
+
+INSTRUCTION_SETS: dict[str, InstructionSet] = {
+    one.name: one
+    for one in sorted(
+        (_read(path) for path in (TEMPLATES / "c" / "isa").glob("*.toml")),
+        key=lambda one: (one.rank, one.name),
+    )
+}
+
+
+def native() -> InstructionSet:
+    """The best instruction set of this machine."""
+    return max((one for one in INSTRUCTION_SETS.values() if one.here), key=lambda one: one.rank)
+
+
+def chosen_at_run_time() -> list[InstructionSet]:
+    """The x86-64 sets that one file can hold together, the best first, the portable last."""
+    kept = [one for one in INSTRUCTION_SETS.values() if not one.machines or one.flags]
+    return sorted(kept, key=lambda one: -one.rank)
+
+
+def pieces(isa: InstructionSet, type: str) -> int:
+    """How many registers hold a type with lanes."""
+    width = isa.lanes(real_of(type))
+    return max(1, lanes_of(type) // width)
+
+
+def fits(isa: InstructionSet, type: str) -> bool:
+    """Whether lanes fill registers of this set, without a rest."""
+    return lanes_of(type) % isa.lanes(real_of(type)) == 0
