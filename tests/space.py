@@ -64,7 +64,7 @@ def draw(choose: Choose) -> dict[str, Any]:
     take("block", tuple(b for b in (1, 2, 3, 4, 5, 8, 16) if b <= largest))
     take("direction", ("forward", "backward"))
     unrolls = n != "runtime" and layout != "skyline" and kd != "runtime"
-    take("unroll", (False, True) if unrolls else (False,))
+    take("unroll", (1, "all") if unrolls else (1,))
     accumulators = ["plain"]
     if dtype in ("float32", "complex64") or integer:
         accumulators.append("wide")

@@ -79,7 +79,7 @@ def test_a_loop_order_is_a_row(copy):
 
 
 def test_a_dtype_is_two_rows(copy):
-    table = copy / "arithmetic.py"
+    table = copy / "dtypes.py"
     text = table.read_text(encoding="utf-8")
     for row, before in (
         ('RealType("int8", 1, 7, "int16")', 'RealType("int16", 2, 15, "int32")'),

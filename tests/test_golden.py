@@ -34,7 +34,7 @@ AXES: dict[str, list[Any]] = {
     "fma": [False, True],
     "block": [1, 2, 3, 4],
     "direction": ["forward", "backward"],
-    "unroll": [False, True],
+    "unroll": [1, "all"],
     "structure": ["symmetric", "hermitian"],
     "triangle": ["upper", "lower"],
     "order": ["column-major", "row-major"],
@@ -137,7 +137,7 @@ GOLDEN: dict[str, list[tuple[str, dict[str, Any]]]] = {
     "buoy_unrolled": [
         (
             "buoy_unrolled",
-            {"layout": "packed", "dtype": "float32", "n": 3, "unroll": True, "fma": True,
+            {"layout": "packed", "dtype": "float32", "n": 3, "unroll": "all", "fma": True,
              "environment": "freestanding", "loop": "dot"},
         ),
     ],

@@ -7,7 +7,7 @@ from functools import cache
 
 import jinja2
 
-from demilune.dtypes import lanes_of
+from demilune.dtypes import lanes_of, real_of
 from demilune.index import (
     Atom,
     Choice,
@@ -18,7 +18,6 @@ from demilune.index import (
     Monomial,
     Quotient,
     Symbol,
-    expr,
 )
 from demilune.languages import ALL, TEMPLATES, Language
 from demilune.plan.tree import (
@@ -36,7 +35,11 @@ from demilune.plan.tree import (
     Pack,
     Store,
     Value,
+    Where,
 )
+
+NEAR = (2, 3)
+"""Fixed strides for which an instruction set may have something better than single loads."""
 
 
 @cache
@@ -119,6 +122,11 @@ class ExpressionWriter:
             return self.primitive("fma", value, parts)
         if isinstance(value, Broadcast):
             return self.primitive("broadcast", value, [self.value(value.operand)])
+        if isinstance(value, Where):
+            ends = [self.integer(end) for end in value.active]
+            return self.primitive(
+                "where", value, [*ends, self.value(value.value), self.value(value.otherwise)]
+            )
         assert isinstance(value, Pack | Fold)
         operands = [self.value(one) for one in value.operands]
         count = len(operands)
@@ -128,17 +136,21 @@ class ExpressionWriter:
 
     def places(self, one: Load | Store) -> list[str]:
         """The array, the index, and the stride or the active lanes where they are told."""
-        texts = [one.array, self.integer(one.index)]
-        if one.stride != ONE:
-            lanes = expr(lanes_of(one.type))
-            return [*texts, *map(self.integer, (one.stride, *(one.active or (expr(0), lanes))))]
-        return texts + ([self.integer(end) for end in one.active] if one.active else [])
+        integers = [one.index, *([one.stride] if one.stride != ONE else []), *(one.active or ())]
+        return [one.array, *map(self.integer, integers)]
 
     def primitive(self, name: str, value: Value | Store, arguments: list[str]) -> str:
         """The call of a primitive for values with lanes."""
         if isinstance(value, Load | Store):
-            name += "_strided" if value.stride != ONE else "_part" if value.active else ""
+            stride = value.stride.constant
+            if isinstance(value, Load) and value.part is None and stride in NEAR:
+                name, arguments = f"{name}_by{stride}", [arguments[0], arguments[1], *arguments[3:]]
+            elif stride != 1:
+                name += "_strided"
+            name += "_part" if value.active else ""
         self.primitives.add((name, value.type))
+        if not self.language.lanes:
+            self.needs |= _helpers_of(name, real_of(value.type))
         return self.syntax["primitive"](name, value.type + self.suffix, arguments)
 
     def place(self, index: Expr, part: int | None) -> str:
@@ -219,6 +231,12 @@ class ExpressionWriter:
             return s["element"](atom.array, self.integer(atom.index))
         condition = self.condition(atom.condition)
         return s["choice"](condition, self.integer(atom.then), self.integer(atom.otherwise))
+
+
+def _helpers_of(name: str, real: str) -> set[str]:
+    """The needs, one of which a language without instruction sets may have helpers for."""
+    kind = next((one for one in ("load", "store") if one in name), name.rstrip("0123456789"))
+    return {kind, f"{kind}_{real}"} if kind != "fma" else {f"fma_lanes_{real}"}
 
 
 def _number(constant: Constant) -> str:

@@ -289,8 +289,8 @@ def quotient(*factors: Term, divisor: int) -> Expr:
 def choice(condition: Compare, then: Term, otherwise: Term) -> Expr:
     """``then`` where ``condition`` holds, else ``otherwise``."""
     known = condition.known
-    if known is not None:
-        return expr(then if known else otherwise)
+    if known is not None or expr(then) == expr(otherwise):
+        return expr(otherwise if known is False else then)
     return _single(Choice(condition, expr(then), expr(otherwise)))
 
 

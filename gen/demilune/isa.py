@@ -10,11 +10,10 @@ from __future__ import annotations
 import platform
 import re
 import tomllib
-from collections.abc import Iterator, Mapping
+from collections.abc import Mapping
 from dataclasses import dataclass, field
 from functools import cache
 from pathlib import Path
-from typing import Any
 
 from demilune.dtypes import lanes_of, real_of
 from demilune.languages import TEMPLATES
@@ -41,12 +40,19 @@ class InstructionSet:
     header: str
     at_run_time: str
     """The condition in C under which this machine has it."""
-    tables: Mapping[str, Mapping[str, Any]] = field(compare=False, repr=False)
-    """The primitives by real type."""
+    registers: Mapping[str, Mapping[str, str]] = field(compare=False, repr=False)
+    """The primitives by type of register, such as ``float64x4``."""
+    helpers: Mapping[str, str] = field(compare=False, repr=False)
+    """Functions that the primitives call."""
 
-    def lanes(self, real: str) -> int:
-        """Lanes of one register."""
-        return int(self.tables[real]["width"]) if real in self.tables else 1
+    def widths(self, real: str) -> list[int]:
+        """Lanes of the registers for a real type, from the narrowest to the widest."""
+        return sorted(lanes_of(type) for type in self.registers if real_of(type) == real)
+
+    def width(self, type: str) -> int | None:
+        """Lanes of the widest register that so many lanes fill without a rest."""
+        fitting = [w for w in self.widths(real_of(type)) if lanes_of(type) % w == 0]
+        return fitting[-1] if fitting else None
 
     @property
     def here(self) -> bool:
@@ -55,16 +61,14 @@ class InstructionSet:
             return False
         return set(self.flags) <= processor_flags()
 
-    def functions(self, real: str, text: str) -> Iterator[tuple[str, str]]:
-        """The helper functions that ``text`` calls, each after those it calls itself."""
-        helpers: Mapping[str, str] = self.tables[real].get("functions", {})
-        called = [name for name in helpers if re.search(rf"\b{name}\(", text)]
-        inner = {
-            pair[0]: pair for name in called
-            for pair in self.functions(real, helpers[name].replace(f" {name}(", ""))
-        }  # fmt: skip
-        yield from inner.values()
-        yield from ((name, helpers[name].strip("\n")) for name in called if name not in inner)
+    def functions(self, text: str) -> dict[str, str]:
+        """The helper functions that ``text`` calls, each after those that it calls itself."""
+        found: dict[str, str] = {}
+        for name, source in self.helpers.items():
+            if re.search(rf"\b{name}\(", text):
+                found |= self.functions(source.replace(f" {name}(", ""))
+                found[name] = source.strip("\n")
+        return found
 
 
 @cache
@@ -89,7 +93,8 @@ def _read(path: Path) -> InstructionSet:
         target=facts["target"],
         header=facts["header"],
         at_run_time=facts["at_run_time"],
-        tables={name: table for name, table in facts.items() if isinstance(table, dict)},
+        registers={name: one for name, one in facts.items() if re.match(r"float\d+x\d+$", name)},
+        helpers=facts.get("functions", {}),
     )
 
 
@@ -111,14 +116,3 @@ def chosen_at_run_time() -> list[InstructionSet]:
     """The x86-64 sets that one file can hold together, the best first, the portable last."""
     kept = [one for one in INSTRUCTION_SETS.values() if not one.machines or one.flags]
     return sorted(kept, key=lambda one: -one.rank)
-
-
-def pieces(isa: InstructionSet, type: str) -> int:
-    """How many registers hold a type with lanes."""
-    width = isa.lanes(real_of(type))
-    return max(1, lanes_of(type) // width)
-
-
-def fits(isa: InstructionSet, type: str) -> bool:
-    """Whether lanes fill registers of this set, without a rest."""
-    return lanes_of(type) % isa.lanes(real_of(type)) == 0

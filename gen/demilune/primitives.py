@@ -4,7 +4,7 @@ Python's float is binary64. Routines emitted in Python carry the source of those
 functions that they use, so that they need nothing but :mod:`math`.
 """
 
-# ruff: noqa: ANN001, ANN202 - the source goes into files for people, without annotations
+# ruff: noqa: ANN001, ANN202, B905, E741 - the source goes into files for people, without annotations
 # mypy: ignore-errors
 import math
 
@@ -63,3 +63,83 @@ def _fma_single(a, b, c):
     if even and p * below != above * q:
         near = math.nextafter(near, math.inf if above * q > p * below else -math.inf)
     return _single(near)
+
+
+# --- numbers side by side: tuples, one number a lane ----------------------------------------
+
+
+def _take(lanes, a, index, stride=1, low=0, high=None, part="real"):
+    """Neighbouring elements; 0 in the lanes before low and from high on."""
+    last = lanes if high is None else high
+    return tuple(
+        float(getattr(a[index + l * stride], part)) if low <= l < last else 0.0
+        for l in range(lanes)
+    )
+
+
+def _put(a, index, re, im=None, stride=1, low=0, high=None):
+    """Writes lanes to neighbouring elements."""
+    for l in range(low, len(re) if high is None else high):
+        a[index + l * stride] = re[l] if im is None else complex(re[l], im[l])
+
+
+def _pack_lanes(lanes, numbers):
+    """One number a lane, and 0 in those that are left."""
+    return (*numbers, *(0.0 for _ in range(lanes - len(numbers))))
+
+
+def _where_lanes(low, high, a, b):
+    """The lanes of a from low to before high, else those of b."""
+    return tuple(p if low <= l < high else q for l, (p, q) in enumerate(zip(a, b)))
+
+
+def _negate_lanes(a):
+    return tuple(-p for p in a)
+
+
+def _add_lanes(a, b):
+    return tuple(p + q for p, q in zip(a, b))
+
+
+def _sub_lanes(a, b):
+    return tuple(p - q for p, q in zip(a, b))
+
+
+def _mul_lanes(a, b):
+    return tuple(p * q for p, q in zip(a, b))
+
+
+def _fma_lanes(a, b, c):
+    return tuple(_fma(p, q, r) for p, q, r in zip(a, b, c))
+
+
+def _fold_lanes(a):
+    """The sum over the lanes, by halves."""
+    while len(a) > 1:
+        half = len(a) // 2
+        a = tuple(p + q for p, q in zip(a[:half], a[half:]))
+    return a[0]
+
+
+def _add_single_lanes(a, b):
+    return tuple(_single(p + q) for p, q in zip(a, b))
+
+
+def _sub_single_lanes(a, b):
+    return tuple(_single(p - q) for p, q in zip(a, b))
+
+
+def _mul_single_lanes(a, b):
+    return tuple(_single(p * q) for p, q in zip(a, b))
+
+
+def _fma_single_lanes(a, b, c):
+    return tuple(_fma_single(p, q, r) for p, q, r in zip(a, b, c))
+
+
+def _fold_single_lanes(a):
+    """The sum over the lanes, by halves, rounded to binary32."""
+    while len(a) > 1:
+        half = len(a) // 2
+        a = tuple(_single(p + q) for p, q in zip(a[:half], a[half:]))
+    return a[0]

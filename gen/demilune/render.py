@@ -14,7 +14,7 @@ from demilune import primitives
 from demilune.contract import contract, file_head, title
 from demilune.dtypes import REAL_SIZE, lanes_of, real_of
 from demilune.expressions import ExpressionWriter, templates
-from demilune.isa import InstructionSet, pieces
+from demilune.isa import InstructionSet
 from demilune.languages import ALL, Language
 from demilune.plan.build import Plan
 from demilune.plan.tree import (
@@ -111,25 +111,27 @@ class _Renderer(ExpressionWriter):
         self.primitives = set()
         routines = [self._routine(plan) for plan in self.plans]
         types = [self._lanes_type(isa, type) for type in sorted({t for _, t in self.primitives})]
-        facts = {"title": isa.title, "target": isa.target, "header": isa.header}
-        facts |= {"at_run_time": isa.at_run_time, "suffix": self.suffix}
+        helpers: dict[str, str] = {}
+        for one in types:
+            helpers |= one.get("functions", {})
+        facts: dict[str, Any] = {"title": isa.title, "target": isa.target, "header": isa.header}
+        facts |= {"at_run_time": isa.at_run_time, "suffix": self.suffix, "functions": helpers}
         self.suffix = ""
         return {**facts, "routines": routines, "types": types if self.language.lanes else []}
 
     def _lanes_type(self, isa: InstructionSet, type: str) -> dict[str, Any]:
         """A type with lanes: how many registers it is, and its primitives as text."""
-        real = real_of(type)
+        real, lanes, width = real_of(type), lanes_of(type), isa.width(type) or 1
         facts = {
-            "name": type + self.suffix, "real": real, "lanes": lanes_of(type),
-            "count": pieces(isa, type), "width": isa.lanes(real), "table": isa.tables[real],
+            "name": type + self.suffix, "real": real, "lanes": lanes, "width": width,
+            "count": lanes // width, "table": isa.registers.get(f"{real}x{width}"),
         }  # fmt: skip
         names = sorted(name for name, one in self.primitives if one == type)
         if not self.language.lanes:
             return facts
         macro = templates().get_template(f"{self.language.name}/lanes.j2").module
         texts = [macro.primitive(facts, name) for name in names]  # type: ignore[attr-defined]
-        helpers = dict(isa.functions(real, "\n".join(texts)))
-        return {**facts, "primitives": texts, "functions": list(helpers.values())}
+        return {**facts, "primitives": texts, "functions": isa.functions("\n".join(texts))}
 
     def _types(self) -> list[str]:
         found = {one.type for plan in self.plans for one in plan.parameters if one.type != "size"}

@@ -131,7 +131,8 @@ class Schedule:
             )
         if lanes > 1 and self.backward:
             yield "lanes", 'lanes go forward along a strip; use direction = "forward"'
-        if lanes > 1 and self.loop in allowed and self.order.mirrored and mirrored:
+        rows = self.loop == "dot" and layout.diagonals is not None
+        if lanes > 1 and self.loop in allowed and self.order.mirrored and mirrored and not rows:
             yield (
                 "lanes",
                 f'the loop order "{self.loop}" visits mirrored elements, which do not lie side by '

@@ -15,13 +15,12 @@ from functools import cached_property
 from typing import Any
 
 from demilune.arithmetic import Arithmetic
-from demilune.dtypes import DTYPES
 from demilune.errors import Problem, SpecError
-from demilune.isa import NATIVE, PORTABLE, native
 from demilune.keys import Key, defaults_of, keys_of, nearest, pick
 from demilune.languages import LANGUAGES
 from demilune.layouts import LAYOUTS, Layout
 from demilune.operations import OPERATIONS, Operation
+from demilune.rules import filled, resolved
 from demilune.schedules import Schedule
 from demilune.targets import Target
 
@@ -196,10 +195,8 @@ def make_spec(name: str, **values: Any) -> Spec:
         values["loop"] = operation.loops()[0]
     if values.get("accumulator") is None and values.get("dtype", "").startswith("int"):
         values["accumulator"] = INTEGER_ACCUMULATOR
-    if values.get("isa") == NATIVE:
-        values["isa"] = native().name
-    if "lanes" not in values and values.get("isa", PORTABLE) != PORTABLE:
-        values["lanes"] = lanes_for(values["isa"], values.get("dtype"))
+    if values.get("isa") is not None:
+        values = filled({**values, "isa": resolved(values["isa"])})
     spec = Spec(
         name,
         pick(operation, values),
@@ -212,12 +209,6 @@ def make_spec(name: str, **values: Any) -> Spec:
     if problems:
         raise SpecError(problems)
     return spec
-
-
-def lanes_for(isa: str, dtype: str | None) -> int:
-    """The lanes that fill a register of an instruction set."""
-    type = Arithmetic().type if dtype is None else DTYPES[dtype]
-    return max(1, *(one.lanes(type.real) for one in Target(isa=isa).instruction_sets))
 
 
 def _together(spec: Spec) -> Iterator[tuple[str, str]]:

@@ -6,6 +6,7 @@ from collections.abc import Iterator
 from dataclasses import dataclass
 
 from demilune.arithmetic import Arithmetic
+from demilune.dtypes import with_lanes
 from demilune.isa import INSTRUCTION_SETS, NATIVE, PORTABLE, InstructionSet, chosen_at_run_time
 from demilune.keys import RUNTIME, key
 from demilune.languages import LANGUAGES
@@ -47,11 +48,11 @@ class Target:
             yield "isa", "vector instructions are for floating-point types"
         elif arithmetic.accumulator == "plain":
             for one in self.instruction_sets:
-                width = one.lanes(arithmetic.real)
-                if arithmetic.lanes % width:
+                if one.width(with_lanes(arithmetic.real, arithmetic.lanes)) is None:
+                    widths = " or ".join(map(str, one.widths(arithmetic.real)))
                     yield (
                         "lanes",
-                        f'"{one.name}" has {width} lanes of {arithmetic.real} in a register; use '
-                        f"a multiple of {width}, not {arithmetic.lanes}",
+                        f'a register of "{one.name}" has {widths} lanes of {arithmetic.real}; use '
+                        f"a multiple of one, not {arithmetic.lanes}",
                     )
                     return

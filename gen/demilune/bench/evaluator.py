@@ -42,6 +42,7 @@ from demilune.plan.tree import (
     Statement,
     Store,
     Value,
+    Where,
 )
 from demilune.plan.writer import PARTS
 
@@ -54,8 +55,7 @@ def fused(left: Any, right: Any, addend: Any) -> Any:
     with np.errstate(all="ignore"):
         if left.dtype == np.float32:
             return _fused32(left, right, addend)
-        triples = zip(left.flat, right.flat, addend.flat, strict=True)
-        return np.array([_fused64(*three) for three in triples]).reshape(left.shape)
+        return _fused64_all(left, right, addend)
 
 
 def _fused32(left: Lanes, right: Lanes, addend: Lanes) -> Lanes:
@@ -69,6 +69,46 @@ def _fused32(left: Lanes, right: Lanes, addend: Lanes) -> Lanes:
     inexact = np.isfinite(near) & (error != 0) & (bits & 1 == 0)
     bits[inexact] += np.where((error > 0) == (near > 0), 1, -1)[inexact]
     return bits.view(np.float64).astype(np.float32)
+
+
+def _two_sum(a: Lanes, b: Lanes) -> tuple[Lanes, Lanes]:
+    """The rounded sum and its error (Knuth)."""
+    s = a + b
+    back = s - a
+    return s, (a - (s - back)) + (b - back)
+
+
+def _two_product(a: Lanes, b: Lanes) -> tuple[Lanes, Lanes]:
+    """The rounded product and its error (Dekker, with Veltkamp's split)."""
+    product = a * b
+
+    def split(value: Lanes) -> tuple[Lanes, Lanes]:
+        scaled = value * 134217729.0
+        high = scaled - (scaled - value)
+        return high, value - high
+
+    (ah, al), (bh, bl) = split(a), split(b)
+    return product, al * bl - (((product - ah * bh) - al * bh) - ah * bl)
+
+
+def _fused64_all(left: Lanes, right: Lanes, addend: Lanes) -> Lanes:
+    # Boldo, Melquiond, "Emulation of a FMA and Correctly Rounded Sums", IEEE Transactions on
+    # Computers 57(4), 2008: the parts are added with the last but one sum rounded to odd. Where
+    # an exponent is too large or too small for that, whole numbers decide.
+    high, low = _two_product(left, right)
+    near, far = _two_sum(addend, low)
+    top, rest = _two_sum(high, near)
+    odd, error = _two_sum(rest, far)
+    bits = odd.view(np.int64).copy()
+    inexact = (error != 0) & (bits & 1 == 0)
+    bits[inexact] += np.where((error > 0) == (odd > 0), 1, -1)[inexact]
+    result = np.asarray(top + bits.view(np.float64))
+    sizes = np.abs(np.stack([left, right, high, addend]))
+    safe = ((sizes > 2.0**-400) & (sizes < 2.0**400)).all(axis=0) & (np.abs(result) > 2.0**-400)
+    for place in np.argwhere(~safe):
+        here = tuple(place)
+        result[here] = _fused64(left[here], right[here], addend[here])
+    return result
 
 
 def _fused64(left: float, right: float, addend: float) -> float:
@@ -108,7 +148,7 @@ def put(
 def _spread(lanes: int, value: Lanes) -> Lanes:
     """A value with an axis of lanes, which one number in all of them does not have yet."""
     value = np.asarray(value)
-    return value if value.ndim == 2 else np.broadcast_to(value, (lanes, *value.shape))
+    return value if value.ndim == 2 else np.broadcast_to(value, (lanes, *(value.shape or (1,))))
 
 
 def fold(lanes: int, value: Lanes) -> Lanes:
@@ -120,9 +160,16 @@ def fold(lanes: int, value: Lanes) -> Lanes:
     return np.asarray(value[0])
 
 
+def where(lanes: int, low: int, high: int, value: Lanes, otherwise: Lanes) -> Lanes:
+    """``value`` in the lanes from ``low`` to before ``high``, else ``otherwise``."""
+    result = np.array(np.broadcast_arrays(_spread(lanes, otherwise), _spread(lanes, value))[0])
+    result[low:high] = _spread(lanes, value)[low:high]
+    return result
+
+
 def pack(lanes: int, values: tuple[Lanes, ...]) -> Lanes:
     """One value a lane, and 0 in those that are left."""
-    given = np.stack(np.broadcast_arrays(*values))
+    given = np.stack(np.broadcast_arrays(*(np.atleast_1d(one) for one in values)))
     rest = np.zeros((lanes - len(given), *given.shape[1:]), given.dtype)
     return np.concatenate([given, rest])
 
@@ -154,6 +201,7 @@ class Evaluator:
             "put": put,
             "fold": fold,
             "pack": pack,
+            "where": where,
         }
         code = compile("\n".join(self._lines), f"<evaluator of {plan.spec.name}>", "exec")
         exec(code, space)  # noqa: S102 - the text was made just above, from the plan alone
@@ -239,6 +287,10 @@ def _value(value: Value) -> str:
         return f"np.{value.type}({value.value!r})"
     if isinstance(value, Load) and lanes_of(value.type) > 1:
         return f"take({_places(value)}, {value.part or 0})"
+    if isinstance(value, Where):
+        ends = f"{_integer(value.active[0])}, {_integer(value.active[1])}"
+        both = f"{_value(value.value)}, {_value(value.otherwise)}"
+        return f"where({lanes_of(value.type)}, {ends}, {both})"
     if isinstance(value, Broadcast):
         return _value(value.operand)
     if isinstance(value, Pack):

@@ -69,6 +69,10 @@ class Band(Rectangular):
         return (self.size - 1) * self.leading + last
 
     @property
+    def diagonals(self) -> Expr:
+        return self.width
+
+    @property
     def known_shape(self) -> bool:
         return self.width.constant is not None
 

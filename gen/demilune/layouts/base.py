@@ -208,6 +208,11 @@ class Layout:
         return 1
 
     @property
+    def diagonals(self) -> Expr | None:
+        """Off-diagonals on either side, where the elements of one lie at a fixed stride."""
+        return None
+
+    @property
     def assumes(self) -> str:
         """What is assumed of sizes that neither n nor the specification tells."""
         return ""

@@ -20,7 +20,18 @@ from demilune.dtypes import REAL_SIZE, with_lanes
 from demilune.index import Compare, Expr, Term, choice, expr, quotient, symbol
 from demilune.keys import RUNTIME, key
 from demilune.layouts import Layout
-from demilune.plan.tree import ONE, Active, Constant, Fold, Load, Local, Number, Pack, Parameter
+from demilune.plan.tree import (
+    ONE,
+    Active,
+    Constant,
+    Fold,
+    Load,
+    Local,
+    Number,
+    Pack,
+    Parameter,
+    Where,
+)
 from demilune.plan.writer import PARTS, Writer
 from demilune.schedules import LOOP_ORDERS, LoopOrder
 
@@ -69,10 +80,14 @@ class Context:
     """A running sum over all strips, of an operation that has one."""
     lane_totals: Number = ()
     """The same, a sum a lane."""
+    held: dict[tuple[str, Expr], Number] = field(default_factory=dict)
+    """Elements of vectors that are in locals for a while, by vector and first index."""
     lanes: int = 1
     """How many neighbouring elements are worked on at a time, from the index that is named."""
     active: Active = None
     """The lanes that have an element; None is all."""
+    stride: Expr = ONE
+    """From the stored element of one lane to that of the next."""
 
     @property
     def n(self) -> Expr:
@@ -95,10 +110,12 @@ class Context:
         name: str = "i",
         steps: int = 1,
         backward: bool = False,
+        fills: bool = False,
     ) -> None:
         """``body`` for every index: lanes at a time, ``steps`` written out in one pass.
 
-        What is left at the end is one step with the lanes that are left.
+        What is left at the end is one step with the lanes that are left; where the range
+        ``fills`` all lanes nothing is.
         """
         w, lanes = self.w, self.arithmetic.lanes
         low, high = expr(low), expr(high)
@@ -110,11 +127,12 @@ class Context:
                 for step in range(count):
                     body(here, i + step * lanes)
 
-            whole = low + size * quotient(high - low, divisor=size) if size > 1 else high
+            exact = size == 1 or (fills and count == 1)
+            whole = high if exact else low + size * quotient(high - low, divisor=size)
             whole = whole if whole.constant is not None else w.integer("whole", whole)
             w.loop(name, low, whole, some, step=size, backward=backward)
             low = whole
-        if lanes > 1:
+        if lanes > 1 and not fills:
             rest = self.wide((expr(0), high - low))
             w.when_known(Compare(low, "<", high), lambda: body(rest, low))
 
@@ -147,33 +165,38 @@ class Context:
     def matrix(self, index: Expr, active: Active = None) -> Number:
         """The stored element at ``index``, in the type of the sums."""
         a = self.arithmetic
-        return convert(self.load("a", index, a.real, a.type.complex, ONE, active), a.sums)
+        return convert(self.load("a", index, a.real, a.type.complex, self.stride, active), a.sums)
 
     def on_diagonal(self, *places: Expr) -> Number:
         """The diagonal element at a place; of a Hermitian matrix only its real part is read.
 
         Several places give an element a lane.
         """
+        parts = 1 if self.layout.hermitian else self.parts
+        if len(places) == 1:
+            return self.matrix(places[0])[:parts]
         narrow = replace(self, lanes=1, active=None)
         numbers = [narrow.matrix(place) for place in places]
-        parts = 1 if self.layout.hermitian else self.parts
-        if self.lanes == 1:
-            return numbers[0][:parts]
         type = with_lanes(self.arithmetic.sums, self.lanes)
         return tuple(Pack(tuple(number[part] for number in numbers), type) for part in range(parts))
 
-    def vector(self, name: str, i: Term, active: Active = None) -> Number:
+    def vector(self, name: str, i: Term) -> Number:
         """Element ``i`` of a vector, in its own type."""
         v = self.vectors[name]
-        return self.load(v.array, v.at(i), v.type, v.complex, v.stride, active)
+        if self.lanes > 1 and (name, expr(i)) in self.held:
+            return self.held[name, expr(i)]
+        return self.load(v.array, v.at(i), v.type, v.complex, v.stride)
 
-    def term(self, name: str, i: Term, active: Active = None) -> Number:
+    def term(self, name: str, i: Term) -> Number:
         """Element ``i`` of a vector, in the type of the sums."""
-        return convert(self.vector(name, i, active), self.arithmetic.sums)
+        return convert(self.vector(name, i), self.arithmetic.sums)
 
-    def term_for(self, strip: Strip, name: str, i: Term, known: Number) -> Number:
-        """Element ``i`` of a vector, ``known`` unless the strip has other lanes than the step."""
-        return known if strip.active is None else self.term(name, i, strip.active)
+    def where(self, strip: Strip, number: Number, otherwise: Number) -> Number:
+        """``number`` in the lanes in which the strip has elements, else ``otherwise``."""
+        if strip.active is None:
+            return number
+        pairs = zip(number, otherwise, strict=True)
+        return tuple(Where(strip.active, one, other, one.type) for one, other in pairs)
 
     def put(self, name: str, i: Term, number: Number) -> None:
         """Writes element ``i`` of a vector, rounded to its type."""
@@ -181,6 +204,8 @@ class Context:
         number = convert(number, v.type)
         if self.lanes == 1:
             self.w.store(v.array, v.at(i), number)
+        elif (name, expr(i)) in self.held:
+            self.w.assign(self.held[name, expr(i)], number)
         else:
             self.w.store(v.array, v.at(i), number, v.stride, self.active)
 
@@ -219,6 +244,8 @@ class Operation:
     """Why some loop orders make no sense."""
     sums: ClassVar[bool] = True
     """Whether there are sums, which an accumulator keeps."""
+    scattered: ClassVar[str] = ""
+    """The vector that a scattering order adds to."""
     mirrored: ClassVar[bool] = True
     """Whether mirrored elements matter (else each stored element is visited once)."""
 
@@ -284,6 +311,10 @@ class Operation:
     def roundings(self, n: int, parts: int) -> int:
         """How many roundings a term of a result can go through, at most."""
         return 2 * parts * n + 8
+
+    def statement_in_lanes(self, c: Context) -> tuple[str, ...]:
+        """How a strip ends whose lanes have been added up, in sentences."""
+        return ()
 
     def described(self, layout: Layout) -> str:
         """The formula with the scalars that the specification fixes."""

@@ -34,6 +34,7 @@ class MatVec(Operation):
     summary: ClassVar[str] = "matrix times vector, added to a vector"
     formula: ClassVar[str] = "y := alpha*A*x + beta*y"
     result: ClassVar[str] = "y"
+    scattered: ClassVar[str] = "y"
     unread: ClassVar[tuple[str, ...]] = ("a", "x")
     why: ClassVar[str] = "a product can be had in every loop order"
 
@@ -158,7 +159,7 @@ class MatVec(Operation):
             strip.factor = c.w.bind("t", x)
         if c.order.gather:
             strip.sum_from = c.arithmetic.zero(c.parts)
-            strip.sum = c.w.running("acc", strip.sum_from, c.parts)
+            strip.sum = c.w.running("acc", c.spread(strip.sum_from), c.parts)
         return strip
 
     def element(self, c: Context, m: Expr, strips: list[tuple[Strip, Expr]], own: bool) -> None:
@@ -167,8 +168,10 @@ class MatVec(Operation):
         if order.gather:
             x = c.term("x", m)
             x = w.bind("xm", x) if several else x
+        apart = c.lanes > 1 and len(strips) > 1  # y need not wait for one strip after the other
         if order.scatter and several:
-            cell = w.running("cell", self._cell(c, m), c.parts)
+            start = c.spread(a.zero(c.parts)) if apart else self._cell(c, m)
+            cell = w.running("cell", start, c.parts)
         for strip, place in strips:
             stored = c.matrix(place, strip.active)
             if c.reused or (order.gather and order.scatter):
@@ -176,14 +179,15 @@ class MatVec(Operation):
             if order.scatter:
                 column = c.in_column(stored, own)
                 if several:
-                    w.assign(cell, a.accumulate(w, cell, column, strip.factor))
+                    added = a.accumulate(w, cell, column, strip.factor)
+                    w.assign(cell, c.where(strip, added, cell))
                 else:
                     self._add_to(c, m, column, strip.factor)
             if order.gather:
-                row, right = c.in_row(stored, own), c.term_for(strip, "x", m, x)
-                w.assign(strip.sum, a.accumulate(w, strip.sum, row, right))
+                added = a.accumulate(w, strip.sum, c.in_row(stored, own), x)
+                w.assign(strip.sum, c.where(strip, added, strip.sum))
         if order.scatter and several:
-            self._keep(c, m, cell)
+            self._keep(c, m, add(self._cell(c, m), cell) if apart else cell)
 
     def diagonal(self, c: Context, strip: Strip, *places: Expr) -> None:
         d = c.on_diagonal(*places)
@@ -295,6 +299,16 @@ class MatVec(Operation):
         if not in_place:
             lines.append(f"At the end {end}.")
         return tuple(lines)
+
+    def statement_in_lanes(self, c: Context) -> tuple[str, ...]:
+        alpha, beta = factor_text(self.alpha, "alpha"), factor_text(self.beta, "beta")
+        start = "0" if self.beta == 0 else f"{beta}y(i)"
+        factor = f" In these sums x(k) stands for ({alpha}x(k))." if alpha else ""
+        times = f"{alpha[:-1]} times " if alpha[:-1] else "minus " if alpha else ""
+        return (
+            f"The sum of y(i) is kept in y(i) itself and starts at {start}.{factor}",
+            f"Then A(k,k)*x(k) is added to the strip's sum, and {times}that to y(k).",
+        )
 
     def described(self, layout: Layout) -> str:
         product = f"{factor_text(self.alpha, 'alpha')}A*x"

@@ -59,7 +59,7 @@ class QuadForm(Operation):
 
     def open(self, c: Context, k: Expr) -> Strip:
         zero = c.arithmetic.zero(c.parts)
-        return Strip(k, sum=c.w.running("acc", zero, c.parts), sum_from=zero)
+        return Strip(k, sum=c.w.running("acc", c.spread(zero), c.parts), sum_from=zero)
 
     def element(self, c: Context, m: Expr, strips: list[tuple[Strip, Expr]], own: bool) -> None:
         x = c.term("x", m)
@@ -67,8 +67,9 @@ class QuadForm(Operation):
         for strip, place in strips:
             stored = c.matrix(place, strip.active)
             stored = c.w.bind("akm", stored) if c.reused else stored
-            row, right = c.in_row(stored, own), c.term_for(strip, "x", m, x)
-            c.w.assign(strip.sum, c.arithmetic.accumulate(c.w, strip.sum, row, right))
+            row = c.in_row(stored, own)
+            added = c.arithmetic.accumulate(c.w, strip.sum, row, x)
+            c.w.assign(strip.sum, c.where(strip, added, strip.sum))
 
     def diagonal(self, c: Context, strip: Strip, *places: Expr) -> None:
         d = c.w.bind("akk", c.on_diagonal(*places))
@@ -117,6 +118,15 @@ class QuadForm(Operation):
             f"(sum + sum) + A(k,k)*x(k), and s, which starts at 0, adds {left}*row in {way} order "
             f"of k{real}.",
             *carried,
+        )
+
+    def statement_in_lanes(self, c: Context) -> tuple[str, ...]:
+        left = "conj(x(k))" if c.layout.hermitian else "x(k)"
+        real = ", of which only the real part is computed" if c.layout.hermitian else ""
+        return (
+            f"Then row is (sum + sum) + A(k,k)*x(k), and {left}*row is added to s{real}. Of strips "
+            "that end together each adds to an s of its own lane; at the end these are added by "
+            "halves, and then the s of the strips that ended alone.",
         )
 
     def described(self, layout: Layout) -> str:

@@ -7,6 +7,8 @@ from functools import cached_property
 from typing import TYPE_CHECKING
 
 from demilune.operations import Context
+from demilune.plan.bands import BandWalk
+from demilune.plan.diagonals import DiagonalWalk
 from demilune.plan.lanes import LaneWalk
 from demilune.plan.prune import pruned
 from demilune.plan.tree import Parameter, Routine
@@ -47,11 +49,22 @@ def make_plan(spec: Spec) -> Plan:
     names += [one.name + part for one in parameters if one.complex for part in PARTS]
     w = Writer((*names, spec.name), unroll=spec.schedule.written_out)
     c = Context(w, spec.layout, spec.arithmetic, order)
-    (LaneWalk if spec.arithmetic.lanes > 1 else Walk)(spec, c).all()
-    sentences = spec.operation.statement(c, spec.schedule.backward, spec.schedule.block)
+    walk = walk_for(spec)(spec, c)
+    walk.all()
+    sentences = walk.statement()
     functions = tuple(w.functions.values())
     return Plan(
         spec,
         Routine(spec.name, parameters, pruned(w.body), functions),
         (*spec.arithmetic.statement, *sentences, *([order.remark] if order.remark else [])),
     )
+
+
+def walk_for(spec: Spec) -> type[Walk]:
+    """How strips are visited: one element at a time, or lanes along a strip or across rows."""
+    if spec.arithmetic.lanes == 1:
+        return Walk
+    across = spec.schedule.order.mirrored and spec.operation.mirrored
+    if across:
+        return DiagonalWalk
+    return LaneWalk if spec.layout.diagonals is None else BandWalk

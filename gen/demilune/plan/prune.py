@@ -15,6 +15,7 @@ from demilune.plan.tree import (
     Reject,
     Statement,
     Store,
+    Where,
     leaves,
     values,
 )
@@ -56,7 +57,7 @@ def _reads(one: Statement) -> set[str]:
         for leaf in leaves(value):
             if isinstance(leaf, Local):
                 names.add(leaf.name)
-            elif isinstance(leaf, Load):
+            elif isinstance(leaf, Load | Where):
                 names |= leaf.names
     if isinstance(one, Store):
         names |= one.names

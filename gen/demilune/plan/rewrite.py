@@ -27,6 +27,7 @@ from demilune.plan.tree import (
     Statement,
     Store,
     Value,
+    Where,
 )
 
 Statements: TypeAlias = tuple[Statement, ...]
@@ -87,6 +88,10 @@ class Rewriter:
         if isinstance(one, Fma):
             left, right = self._value(one.left), self._value(one.right)
             return self.value(Fma(left, right, self._value(one.addend), one.type))
+        if isinstance(one, Where):
+            active = (self.integer(one.active[0]), self.integer(one.active[1]))
+            value, otherwise = self._value(one.value), self._value(one.otherwise)
+            return self.value(Where(active, value, otherwise, one.type))
         if isinstance(one, Pack | Fold):
             return self.value(replace(one, operands=tuple(map(self._value, one.operands))))
         if isinstance(one, Negate | Convert | Broadcast):

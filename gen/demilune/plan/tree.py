@@ -121,8 +121,23 @@ class Fold:
     type: str
 
 
+@dataclass(frozen=True)
+class Where:
+    """The lanes of ``value`` that are active, and those of ``otherwise`` that are not."""
+
+    active: tuple[Expr, Expr]
+    value: Value
+    otherwise: Value
+    type: str
+
+    @property
+    def names(self) -> frozenset[str]:
+        """The integers that tell which lanes are active."""
+        return _names(*self.active)
+
+
 Value: TypeAlias = (
-    Constant | Local | Load | Binary | Negate | Fma | Convert | Broadcast | Pack | Fold
+    Constant | Local | Load | Binary | Negate | Fma | Convert | Broadcast | Pack | Fold | Where
 )
 Number: TypeAlias = tuple[Value, ...]
 """One value, or the real and the imaginary part."""
@@ -348,6 +363,8 @@ def operands(value: Value) -> tuple[Value, ...]:
         return (value.operand,)
     if isinstance(value, Pack | Fold):
         return value.operands
+    if isinstance(value, Where):
+        return (value.value, value.otherwise)
     return ()
 
 

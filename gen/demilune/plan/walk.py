@@ -32,6 +32,10 @@ class Walk:
         self.backward, self.block = spec.schedule.backward, spec.schedule.block
         self.steps = spec.schedule.steps
 
+    def statement(self) -> tuple[str, ...]:
+        """The order of the sums in sentences."""
+        return self.operation.statement(self.c, self.backward, self.block)
+
     def all(self) -> None:
         self._refuse()
         self.operation.prologue(self.c)
@@ -72,27 +76,30 @@ class Walk:
 
     def _group(self, group: Group, by: dict[str, Expr]) -> None:
         group = group.substitute(by)
-        w, b, back = self.w, self.block, self.backward
+        w, b = self.w, self.block
         low, high = group.low, group.high
         if b == 1:
-            w.loop("k", low, high, lambda k: self._strips(group, [k]), backward=back)
+            self._single(group, low, high)
             return
         count = b * quotient(high - low, divisor=b)
         whole = high - count if self.whole_last else low + count
         whole = whole if whole.constant is not None else w.integer("whole", whole)
 
-        def blocks(low: Expr, high: Expr) -> None:
-            w.loop(
-                "k", low, high, lambda k: self._strips(group, [k + c for c in range(b)]),
-                step=b, backward=back,
-            )  # fmt: skip
-
-        def single(low: Expr, high: Expr) -> None:
-            w.loop("k", low, high, lambda k: self._strips(group, [k]), backward=back)
-
+        blocks, single = partial(self._blocks, group), partial(self._single, group)
         parts = (single, blocks) if self.whole_last else (blocks, single)
         for part in self._turned([partial(parts[0], low, whole), partial(parts[1], whole, high)]):
             part()
+
+    def _blocks(self, group: Group, low: Expr, high: Expr) -> None:
+        """The strips from low to high, which fill whole blocks."""
+        self.w.loop(
+            "k", low, high, lambda k: self._strips(group, [k + c for c in range(self.block)]),
+            step=self.block, backward=self.backward,
+        )  # fmt: skip
+
+    def _single(self, group: Group, low: Expr, high: Expr) -> None:
+        """The strips from low to high, fewer than a block has."""
+        self.w.loop("k", low, high, lambda k: self._strips(group, [k]), backward=self.backward)
 
     def _strips(self, group: Group, ks: list[Expr]) -> None:
         """Some neighbouring strips at a time."""
@@ -200,12 +207,14 @@ def apart_by(bounds: list[Expr]) -> int | None:
     items = [_items(one) for one in bounds]
     if len({len(one) for one in items}) > 1:
         return None
-    moves = [[(own - other).constant for own, other in zip(one, items[0], strict=True)]
-             for one in items]  # fmt: skip
-    known = [move for one in moves for move in one if move is not None]
-    if len(known) < sum(map(len, moves)):
-        return None
-    return max(max(move) - min(move) for move in zip(*moves, strict=True))
+    most = 0
+    for same in zip(*items, strict=True):
+        moves = [(one - same[0]).constant for one in same]
+        known = [move for move in moves if move is not None]
+        if known != moves:
+            return None
+        most = max(most, max(known) - min(known))
+    return most
 
 
 def _items(value: Expr) -> tuple[Expr, ...]:

@@ -227,11 +227,11 @@ def _random(shared: dict[Any, Array], key: Any, count: int, dtype: str) -> Array
 
 def stored(plan: Plan, values: Mapping[str, Any]) -> int:
     """The elements of the stored half."""
-    layout, n = plan.spec.layout, values["n"]
+    layout, n = plan.spec.layout, int(values["n"])
     if layout.whole:
         return n * (n + 1) // 2
     if "kd" in values:
-        kd = min(values["kd"], n - 1)
+        kd = min(int(values["kd"]), n - 1)
         return n * (kd + 1) - kd * (kd + 1) // 2
     return sum(high - low for _, low, high, _ in layout.strips(values))
 

@@ -114,9 +114,9 @@ def _candidates() -> Iterator[tuple[str, str]]:
             for path in sorted(Path(folder).parent.glob(f"{package}.libs/*openblas*.so")):
                 yield f"{package}'s", str(path)
     for name in ("blas", "openblas", "blis"):
-        path = ctypes.util.find_library(name)
-        if path:
-            yield f"the system's {path}", path
+        found = ctypes.util.find_library(name)
+        if found:
+            yield f"the system's {found}", found
 
 
 def routine_for(spec: Spec) -> str | None:
