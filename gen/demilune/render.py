@@ -239,7 +239,8 @@ class _Renderer(ExpressionWriter):
             low, high = self.integer(one.low), self.integer(one.high)
             last = self.integer(one.high - one.step)
             inside = block(one.body)
-            return s["loop"](one.variable, low, high, last, one.step, one.backward, inside)
+            loop = s["loop"](one.variable, low, high, last, one.step, one.backward, inside)
+            return s["parallel"](loop) if one.parallel else loop
         if isinstance(one, If):
             then, otherwise = block(one.then), block(one.otherwise)
             return s["branch"](self.condition(one.condition), then, otherwise)

@@ -17,6 +17,7 @@ LARGEST_BLOCK = 16
 LARGEST_UNROLLED = 32
 LARGEST_STEPS = 8
 ALL = "all"
+MOST_THREADS = 16
 
 
 @dataclass(frozen=True)
@@ -70,6 +71,10 @@ class Schedule:
     direction: str = key(
         "forward", "from the first strip to the last, or back", words=("forward", "backward")
     )
+    threads: int = key(
+        1, "parts that may run at the same time (OpenMP); the same bits whatever runs them",
+        whole=True, minimum=1, maximum=MOST_THREADS,
+    )  # fmt: skip
     unroll: int | str = key(
         1, 'steps of an innermost loop written out in one pass; "all" writes out a small fixed n',
         words=(ALL,), whole=True, minimum=1, maximum=LARGEST_STEPS,
@@ -102,6 +107,7 @@ class Schedule:
         why: str,
         lanes: int,
         mirrored: bool,
+        in_place: bool,
     ) -> Iterator[tuple[str, str]]:
         """Pairs of a key and why its value cannot be, given the loop orders ``allowed``."""
         n, period = layout.n, layout.period
@@ -138,5 +144,21 @@ class Schedule:
                 f'the loop order "{self.loop}" visits mirrored elements, which do not lie side by '
                 'side; use loop = "fused"',
             )
+        if self.threads > 1:
+            yield from self._thread_problems(layout, lanes, in_place)
         if self.steps > 1 and self.backward:
             yield "unroll", 'steps are written out with direction = "forward" only'
+
+    def _thread_problems(
+        self, layout: Layout, lanes: int, in_place: bool
+    ) -> Iterator[tuple[str, str]]:
+        if len(layout.groups()) > 1 or any(group.around for group in layout.groups()):
+            yield "threads", f'the strips of layout "{layout.name}" are not one run to be parted'
+        elif layout.diagonals is not None and self.loop == "dot" and lanes > 1:
+            yield "threads", "rows side by side are too little work for threads; leave it at 1"
+        if not in_place:
+            yield "threads", 'parts of a sum are kept plainly; use accumulator = "plain"'
+        if self.backward:
+            yield "threads", 'parts go forward; use direction = "forward"'
+        if self.written_out:
+            yield "threads", "a small fixed n is too little work for threads; leave it at 1"

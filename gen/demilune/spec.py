@@ -218,6 +218,7 @@ def _together(spec: Spec) -> Iterator[tuple[str, str]]:
     yield from spec.schedule.problems(
         spec.layout, spec.operation.name, spec.operation.loops(), spec.operation.why,
         spec.arithmetic.lanes, spec.operation.mirrored,
+        spec.arithmetic.in_place,
     )  # fmt: skip
     yield from spec.arithmetic.problems()
     yield from spec.target.problems(spec.arithmetic)
@@ -229,7 +230,9 @@ def _together(spec: Spec) -> Iterator[tuple[str, str]]:
                 'one is "symmetric"'
             ),
         )
-    parameters = spec.operation.all_parameters(spec.layout, spec.arithmetic, spec.schedule.order)
+    parameters = spec.operation.all_parameters(
+        spec.layout, spec.arithmetic, spec.schedule.order, spec.schedule.threads
+    )
     if spec.schedule.loop in spec.operation.loops() and spec.name in {p.name for p in parameters}:
         yield "name", f'"{spec.name}" is the name of a parameter of the routine'
     if spec.target.file is not None:

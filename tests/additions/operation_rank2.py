@@ -49,7 +49,12 @@ class RankTwo(Operation):
             yield "accumulator", "an update has no sum whose errors could be compensated"
 
     def parameters(
-        self, matrix: Parameter, layout: Layout, arithmetic: Arithmetic, order: LoopOrder
+        self,
+        matrix: Parameter,
+        layout: Layout,
+        arithmetic: Arithmetic,
+        order: LoopOrder,
+        threads: int,
     ) -> tuple[Parameter, ...]:
         complex, real = arithmetic.type.complex, arithmetic.real
         return (

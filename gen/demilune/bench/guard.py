@@ -10,6 +10,7 @@ import mmap
 import os
 import sys
 from collections.abc import Iterator
+from dataclasses import replace
 from functools import partial
 from typing import Any
 
@@ -19,6 +20,7 @@ import numpy as np
 from demilune.bench import isolation, watch
 from demilune.bench.problem import PAD, Lanes, Problem
 from demilune.bench.run import arguments_of, flat
+from demilune.isa import PORTABLE
 from demilune.render import render
 from demilune.toolchain import cache
 from demilune.toolchain.build import flags_for
@@ -39,9 +41,10 @@ def outside_touched(executable: Executable, problems: list[Problem]) -> Iterator
         yield from _in_child(_guarded(executable, problems))
         return
     found = list(_in_child(_watched(executable, problems)))
-    if found and isinstance(executable, CExecutable):
-        # A vector load may pass over elements that it does not use, as compilers are free to
-        # have it: judge by a build of the same plan whose accesses are single elements.
+    lanes = executable.plan.spec.arithmetic.lanes > 1
+    if (found or lanes) and isinstance(executable, CExecutable):
+        # A vector load counts at its first element, and may pass over elements that it does not
+        # use: judge by a build of the same plan whose accesses are single elements.
         found = list(_in_child(_watched(_without_vectors(executable), problems)))
     yield from found
 
@@ -54,10 +57,13 @@ def _in_child(work: Iterator[str]) -> Iterator[str]:
 
 
 def _without_vectors(executable: CExecutable) -> CExecutable:
-    plan = executable.plan
+    spec = executable.plan.spec
+    target = replace(spec.target, isa=PORTABLE)
+    plan = replace(executable.plan, spec=replace(spec, target=target))
     files = render([plan], plan.spec.name, "c", contracts=False)
-    flags = (*flags_for([plan]), "-fno-tree-vectorize")
-    return CExecutable(plan, cache.library(find_compiler(), flags, files))
+    compiler = find_compiler()
+    flags = (*flags_for(compiler, [plan]), "-fno-tree-vectorize")
+    return CExecutable(plan, cache.library(compiler, flags, files))
 
 
 def _watched(executable: Executable, problems: list[Problem]) -> Iterator[str]:

@@ -137,6 +137,8 @@ def _isolated(plan: Plan, executable: Executable, seed: int, until: Collection[s
 def _levels(
     plan: Plan, executable: Executable, seed: int, until: Collection[str]
 ) -> Iterator[Level]:
+    if isinstance(executable, CExecutable) and plan.spec.schedule.threads > 1:
+        executable.one_thread()  # threads do not outlive the fork that the bench runs in
     bench = _Bench(plan, executable, seed)
     checks: tuple[Callable[[Level], None], ...] = (
         bench.exact, bench.faithful, bench.bound, bench.untouched, bench.calling,

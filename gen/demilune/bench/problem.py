@@ -83,7 +83,8 @@ class Problem:
 def extent_of(one: Parameter, sizes: dict[str, Any]) -> int:
     """Elements that the routine may touch."""
     assert one.extent is not None
-    return max(0, one.extent.value(sizes)) if sizes["n"] > 0 or one.name == "s" else 0
+    fixed = one.name != "a" and one.extent.constant is not None
+    return max(0, one.extent.value(sizes)) if sizes["n"] > 0 or fixed else 0
 
 
 def places(n: int, step: int) -> npt.NDArray[np.intp]:

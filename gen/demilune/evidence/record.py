@@ -122,7 +122,7 @@ def _compiler(outcome: Outcome) -> dict[str, Any] | None:
     flags: dict[str, list[str]] = {}
     for unit in outcome.units:
         if LANGUAGES[unit.language].runs == "cffi" and unit.error is None:
-            flags[unit.file] = list(flags_for(unit.plans))
+            flags[unit.file] = list(flags_for(compiler, unit.plans))
     return {"name": clean(compiler.name), "version": clean(compiler.version), "flags": flags}
 
 

@@ -78,6 +78,8 @@ class Context:
     vectors: dict[str, Vector] = field(default_factory=dict)
     totals: Number = ()
     """A running sum over all strips, of an operation that has one."""
+    outer: tuple[Number, Number] = ((), ())
+    """The sums over all strips while those of a part stand in their place."""
     lane_totals: Number = ()
     """The same, a sum a lane."""
     held: dict[tuple[str, Expr], Number] = field(default_factory=dict)
@@ -267,13 +269,30 @@ class Operation:
     # --- to be told by each operation ---------------------------------------------------------
 
     def parameters(
-        self, matrix: Parameter, layout: Layout, arithmetic: Arithmetic, order: LoopOrder
+        self,
+        matrix: Parameter,
+        layout: Layout,
+        arithmetic: Arithmetic,
+        order: LoopOrder,
+        threads: int,
     ) -> tuple[Parameter, ...]:
         """All parameters, in order; ``matrix`` is the array of the half."""
         raise NotImplementedError
 
     def prologue(self, c: Context) -> None:
         """What is done before the first strip."""
+
+    joined: ClassVar[str] = ""
+    """How what parts have added is put together, as the end of a sentence."""
+
+    def begin_part(self, c: Context, part: Expr) -> None:
+        """What is done before the strips of a part that may run beside others."""
+
+    def end_part(self, c: Context, part: Expr) -> None:
+        """What is done behind them."""
+
+    def join_parts(self, c: Context, count: int) -> None:
+        """What is done when all parts have ended."""
 
     def open(self, c: Context, k: Expr) -> Strip:
         """Starts strip k."""
@@ -393,7 +412,7 @@ class Operation:
         c.vectors[name] = Vector(name, start, step, type, c.parts == 2)
 
     def all_parameters(
-        self, layout: Layout, arithmetic: Arithmetic, order: LoopOrder
+        self, layout: Layout, arithmetic: Arithmetic, order: LoopOrder, threads: int = 1
     ) -> tuple[Parameter, ...]:
         """The parameters of the routine: sizes, then what the operation needs."""
         size: tuple[Parameter, ...] = ()
@@ -404,7 +423,11 @@ class Operation:
             "a", "array", "the stored half of A", arithmetic.real, arithmetic.type.complex,
             extent, "in",
         )  # fmt: skip
-        return (*size, *layout.sizes(), *self.parameters(matrix, layout, arithmetic, order))
+        return (
+            *size,
+            *layout.sizes(),
+            *self.parameters(matrix, layout, arithmetic, order, threads),
+        )
 
     def stride_rules(self) -> Iterator[tuple[Compare, str, str]]:
         """Conditions under which a stride is refused."""

@@ -8,7 +8,7 @@ from math import isqrt
 from typing import Any, ClassVar
 
 from demilune.arithmetic import Arithmetic, add, convert
-from demilune.index import Expr
+from demilune.index import Expr, expr
 from demilune.keys import RUNTIME, key
 from demilune.layouts import Layout
 from demilune.operations.base import (
@@ -16,6 +16,7 @@ from demilune.operations.base import (
     Operation,
     Scalar,
     Strip,
+    Vector,
     factor_text,
     is_unit,
     scaled,
@@ -56,13 +57,18 @@ class MatVec(Operation):
         return order.scatter and not arithmetic.in_place
 
     def parameters(
-        self, matrix: Parameter, layout: Layout, arithmetic: Arithmetic, order: LoopOrder
+        self,
+        matrix: Parameter,
+        layout: Layout,
+        arithmetic: Arithmetic,
+        order: LoopOrder,
+        threads: int,
     ) -> tuple[Parameter, ...]:
         complex = arithmetic.type.complex
         use = "out" if self.beta == 0 else "inout"
         work: tuple[Parameter, ...] = ()
-        if self._workspace(arithmetic, order):
-            extent = layout.size * arithmetic.cells
+        if self._workspace(arithmetic, order) or (threads > 1 and order.scatter):
+            extent = layout.size * (threads if threads > 1 else arithmetic.cells)
             meaning = "workspace of the caller; its contents do not matter"
             work = (
                 Parameter("work", "array", meaning, arithmetic.sums, complex, extent, "scratch"),
@@ -146,6 +152,35 @@ class MatVec(Operation):
         """Element i of y, in the type of the sums."""
         term = c.term("y", i)
         return c.w.bind("old", term) if c.parts > 1 else term
+
+    joined: ClassVar[str] = (
+        "; where they scatter, each adds to a vector of its own in work, which starts at 0, and in "
+        "the end y(i) adds these in their order"
+    )
+
+    def begin_part(self, c: Context, part: Expr) -> None:
+        if not c.order.scatter:
+            return
+        own = Vector("work", part * c.n, expr(1), c.arithmetic.sums, c.parts == 2)
+        c.vectors["whole y"], c.vectors["y"] = c.vectors["y"], own
+        zero = c.arithmetic.zero(c.parts)
+        c.each(0, c.n, lambda c, i: c.put("y", i, c.spread(zero)))
+
+    def end_part(self, c: Context, part: Expr) -> None:
+        if c.order.scatter:
+            c.vectors["y"] = c.vectors.pop("whole y")
+
+    def join_parts(self, c: Context, count: int) -> None:
+        if not c.order.scatter:
+            return
+
+        def one(c: Context, i: Expr) -> None:
+            total = c.vector("y", i)
+            for part in range(count):
+                total = add(total, c.load("work", part * c.n + i, c.arithmetic.sums, c.parts == 2))
+            c.put("y", i, total)
+
+        c.each(0, c.n, one)
 
     def open(self, c: Context, k: Expr) -> Strip:
         strip = Strip(k)

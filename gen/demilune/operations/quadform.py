@@ -12,7 +12,7 @@ from demilune.arithmetic import Arithmetic, add, conjugate, convert
 from demilune.index import Expr, expr
 from demilune.layouts import Layout
 from demilune.operations.base import Context, Operation, Strip
-from demilune.plan.tree import Parameter
+from demilune.plan.tree import Number, Parameter
 from demilune.schedules import LoopOrder
 
 
@@ -32,7 +32,12 @@ class QuadForm(Operation):
         return order.gather
 
     def parameters(
-        self, matrix: Parameter, layout: Layout, arithmetic: Arithmetic, order: LoopOrder
+        self,
+        matrix: Parameter,
+        layout: Layout,
+        arithmetic: Arithmetic,
+        order: LoopOrder,
+        threads: int,
     ) -> tuple[Parameter, ...]:
         complex = arithmetic.type.complex
         result = Parameter(
@@ -44,13 +49,45 @@ class QuadForm(Operation):
             *layout.after(),
             *self.vector_parameters("x", "the vector x", layout, arithmetic.real, complex, "in"),
             result,
+            *self._workspace(arithmetic, complex and not layout.hermitian, threads),
         )
+
+    def _workspace(
+        self, arithmetic: Arithmetic, complex: bool, threads: int
+    ) -> tuple[Parameter, ...]:
+        meaning = "workspace of the caller, a number a part; its contents do not matter"
+        work = Parameter(
+            "work", "array", meaning, arithmetic.sums, complex, expr(threads), "scratch"
+        )
+        return (work,) if threads > 1 else ()
 
     def _parts(self, c: Context) -> int:
         return 1 if c.layout.hermitian else c.parts
 
+    joined: ClassVar[str] = (
+        ", each with an s of its own, which it leaves in work; in the end s adds these in their "
+        "order"
+    )
+
     def prologue(self, c: Context) -> None:
         self.name_vector(c, "x", c.arithmetic.real)
+        self._start(c)
+
+    def begin_part(self, c: Context, part: Expr) -> None:
+        c.outer = (c.totals, c.lane_totals)
+        self._start(c)
+
+    def end_part(self, c: Context, part: Expr) -> None:
+        c.w.store("work", part, self._total(c))
+        c.totals, c.lane_totals = c.outer
+
+    def join_parts(self, c: Context, count: int) -> None:
+        for part in range(count):
+            number = c.load("work", expr(part), c.arithmetic.sums, self._parts(c) == 2)
+            c.w.assign(c.totals, add(c.totals, number))
+
+    def _start(self, c: Context) -> None:
+        """The sum over all strips, at 0."""
         parts = self._parts(c)
         zero = c.arithmetic.zero(parts)
         c.totals = c.w.running("sum", zero, parts)
@@ -91,10 +128,12 @@ class QuadForm(Operation):
         totals = c.lane_totals if c.lanes > 1 else c.totals
         w.assign(totals, a.accumulate_sum(w, totals, left, row))
 
-    def epilogue(self, c: Context) -> None:
+    def _total(self, c: Context) -> Number:
         total = convert(c.arithmetic.total(c.totals), c.arithmetic.result)
-        if c.arithmetic.lanes > 1:
-            total = add(c.folded(c.lane_totals), total)
+        return add(c.folded(c.lane_totals), total) if c.arithmetic.lanes > 1 else total
+
+    def epilogue(self, c: Context) -> None:
+        total = self._total(c)
         c.w.store("s", expr(0), total)
 
     def statement(self, c: Context, backward: bool, block: int) -> tuple[str, ...]:

@@ -46,7 +46,12 @@ class RankOne(Operation):
             yield "accumulator", "an update has no sum whose errors could be compensated"
 
     def parameters(
-        self, matrix: Parameter, layout: Layout, arithmetic: Arithmetic, order: LoopOrder
+        self,
+        matrix: Parameter,
+        layout: Layout,
+        arithmetic: Arithmetic,
+        order: LoopOrder,
+        threads: int,
     ) -> tuple[Parameter, ...]:
         complex = arithmetic.type.complex
         alpha = self.scalar_parameter(

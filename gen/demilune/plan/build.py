@@ -44,7 +44,9 @@ class Plan:
 def make_plan(spec: Spec) -> Plan:
     """The plan of a specification that has been checked."""
     order = spec.schedule.order
-    parameters = spec.operation.all_parameters(spec.layout, spec.arithmetic, order)
+    parameters = spec.operation.all_parameters(
+        spec.layout, spec.arithmetic, order, spec.schedule.threads
+    )
     names = [one.name for one in parameters if one.kind != "scalar" or not one.complex]
     names += [one.name + part for one in parameters if one.complex for part in PARTS]
     w = Writer((*names, spec.name), unroll=spec.schedule.written_out)

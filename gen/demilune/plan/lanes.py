@@ -58,7 +58,7 @@ class LaneWalk(Walk):
             "At the end of a strip its lanes are added by halves, lane l and lane l + "
             f"{lanes // 2} first, until one sum is left."
         )
-        return (*lines, *self.operation.statement_in_lanes(self.c))
+        return (*lines, *self.operation.statement_in_lanes(self.c), *self.in_parts)
 
     def _group(self, group: Group, by: dict[str, Expr]) -> None:
         # Where strips grow, those that fill no block come first, when they are short.
@@ -66,20 +66,26 @@ class LaneWalk(Walk):
         super()._group(group, by)
 
     def _blocks(self, group: Group, low: Expr, high: Expr) -> None:
+        edge = partial(self._beside_edge, group, low, high)
+        self.w.when_known(Compare(low, "<", high), edge)
+
+    def _beside_edge(self, group: Group, low: Expr, high: Expr) -> None:
+        """The blocks, while what fills no lanes at the end of the result is held in a local."""
         w, c, vector = self.w, self.c, self.operation.scattered
         edge = self._edge_of(group, low)
-        if edge is None or (high - low).constant == 0:
+        if edge is None:
             super()._blocks(group, low, high)
             return
         self.edge = edge
         step = c.wide((expr(0), edge.count))
-        if vector and c.order.scatter:
+        held = bool(vector) and c.order.scatter
+        if held:
             w.comment(f"what fills no lanes at the end of {vector} is held in a register")
-            held = w.running("edge", step.vector(vector, edge.start), c.parts)
-            c.held[vector, edge.start] = held
+            start = step.vector(vector, edge.start)
+            c.held[vector, edge.start] = w.running("edge", start, c.parts)
         super()._blocks(group, low, high)
         self.edge = None
-        if vector and c.order.scatter:
+        if held:
             step.put(vector, edge.start, c.held.pop((vector, edge.start)))
 
     def _edge_of(self, group: Group, low: Expr) -> Edge | None:

@@ -241,6 +241,8 @@ class For:
     body: tuple[Statement, ...]
     step: int = 1
     backward: bool = False
+    parallel: bool = False
+    """Whether the passes may run at the same time: none uses what another writes."""
 
     @property
     def first(self) -> Expr:

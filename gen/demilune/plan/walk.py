@@ -10,6 +10,7 @@ from demilune.index import Compare, Expr, Extreme, expr, maximum, minimum, quoti
 from demilune.keys import RUNTIME
 from demilune.layouts import Diagonal, Group, Piece, Range
 from demilune.operations import Context, Strip
+from demilune.plan.parts import in_parts
 
 if TYPE_CHECKING:
     from demilune.spec import Spec
@@ -34,7 +35,19 @@ class Walk:
 
     def statement(self) -> tuple[str, ...]:
         """The order of the sums in sentences."""
-        return self.operation.statement(self.c, self.backward, self.block)
+        return self.operation.statement(self.c, self.backward, self.block) + self.in_parts
+
+    @property
+    def in_parts(self) -> tuple[str, ...]:
+        """How the strips are parted, in sentences."""
+        threads = self.spec.schedule.threads
+        if threads == 1:
+            return ()
+        return (
+            f"The strips are parted into {threads} runs of about equal work, which may run at the "
+            f"same time{self.operation.joined}. The parts depend on n alone, so the bits are the "
+            "same for every number of threads.",
+        )
 
     def all(self) -> None:
         self._refuse()
@@ -43,7 +56,11 @@ class Walk:
         for name, value in self.layout.integers:
             named[name] = self.w.integer(name, value.substitute(named))
         groups = [group.substitute(named) for group in self.layout.groups()]
+        threads = self.spec.schedule.threads
         for group in self._turned(groups):
+            if threads > 1:
+                in_parts(self, group, threads)
+                continue
             self._nest(group.around, partial(self._group, group))
         self.operation.epilogue(self.c)
 

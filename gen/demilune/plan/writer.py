@@ -162,13 +162,15 @@ class Writer:
         *,
         step: int = 1,
         backward: bool = False,
+        parallel: bool = False,
     ) -> None:
         """``body`` for every value; told the value as an expression."""
         low, high = expr(low), expr(high)
         span = (high - low).constant
         if span is not None and span <= 0:
             return
-        if span is not None and (span <= step or (self.unroll and low.constant is not None)):
+        written_out = self.unroll and low.constant is not None and not parallel
+        if span is not None and (span <= step or written_out):
             passes = range(0, span, step)
             for offset in reversed(passes) if backward else passes:
                 body(low + offset)
@@ -177,7 +179,7 @@ class Writer:
             (name,) = self._free(variable)
             body(symbol(name))
         if statements:
-            self.write(For(name, low, high, tuple(statements), step, backward))
+            self.write(For(name, low, high, tuple(statements), step, backward, parallel))
 
     def when_known(self, condition: Compare, then: Callable[[], None]) -> None:
         """``then`` where the condition holds; decided now where that can be told."""

@@ -26,21 +26,22 @@ def executable_of(plan: Plan, files: Mapping[str, str]) -> Executable:
     return unit.executables[0]
 
 
-def flags_for(plans: list[Plan]) -> tuple[str, ...]:
+def flags_for(compiler: Compiler, plans: list[Plan]) -> tuple[str, ...]:
     """The compiler flags for a file that holds these routines; all have one environment."""
     fma = any(uses_fma(plan.routine) for plan in plans)
+    threads = any(plan.spec.schedule.threads > 1 for plan in plans)
     environment = plans[0].spec.target.environment
     if fma and environment == "freestanding" and not has_fma():
         raise MissingError(
             "this machine has no fused multiply-add instruction, which a freestanding routine "
             'with fma = true needs; use environment = "hosted" or another machine'
         )
-    return library_flags(fma, environment)
+    return library_flags(fma, environment) + (compiler.threads_flags if threads else ())
 
 
 def compiled(compiler: Compiler, plans: list[Plan], files: Mapping[str, str]) -> Path:
     """The library of some files, compiled or from the cache."""
-    return cache.library(compiler, flags_for(plans), files)
+    return cache.library(compiler, flags_for(compiler, plans), files)
 
 
 def _loaded(compiler: Compiler, unit: Unit) -> list[Executable]:

@@ -6,6 +6,7 @@ import os
 import platform
 import shutil
 import subprocess
+import tempfile
 from dataclasses import dataclass
 from functools import cache
 from pathlib import Path
@@ -20,6 +21,11 @@ WARNING_FLAGS = (
     "-Wstrict-prototypes", "-Wshadow",
 )  # fmt: skip
 
+OPENMP_PROBE = """
+#include <omp.h>
+int most(void) { return omp_get_max_threads(); }
+"""
+
 HOW_TO_GET = (
     "install gcc or clang, for example with: apt-get install gcc "
     "(or set CC to the compiler you have)"
@@ -33,6 +39,11 @@ class Compiler:
     name: str
     path: str
     version: str
+
+    @property
+    def threads_flags(self) -> tuple[str, ...]:
+        """The flags for OpenMP, or none where the compiler has it not: routines run serially."""
+        return _threads_flags(self)
 
     def run(self, arguments: list[str], folder: Path, seconds: float = 300) -> None:
         """Compiles; raises :class:`CheckError` with what the compiler said if it fails."""
@@ -53,6 +64,17 @@ class Compiler:
             said = (done.stderr or done.stdout).strip().splitlines()
             errors = [line for line in said if "error" in line][:5] or said[-5:]
             raise CheckError(f"{self.name} failed (exit {done.returncode}): " + "; ".join(errors))
+
+
+@cache
+def _threads_flags(compiler: Compiler) -> tuple[str, ...]:
+    with tempfile.TemporaryDirectory(prefix="demilune-") as folder:
+        (Path(folder) / "one.c").write_text(OPENMP_PROBE, encoding="ascii")
+        try:
+            compiler.run(["-fopenmp", "-shared", "-fPIC", "-o", "one.so", "one.c"], Path(folder))
+        except CheckError:
+            return ()
+    return ("-fopenmp",)
 
 
 USUAL = ("gcc", "clang")

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import linecache
 from collections.abc import Callable, Mapping
+from contextlib import suppress
 from pathlib import Path
 from typing import Any, Protocol
 
@@ -35,11 +36,19 @@ class CExecutable:
 
     def __init__(self, plan: Plan, library: Path) -> None:
         self.plan = plan
+        self._path = str(library)
         self._ffi = cffi.FFI()
         self._ffi.cdef(prototype(plan) + ";")
         self._library = self._ffi.dlopen(str(library))
         self._call: Callable[..., int | None] = getattr(self._library, plan.spec.name)
         self._positions = {argument_position(plan, p.name): p.name for p in plan.parameters}
+
+    def one_thread(self) -> None:
+        """Keeps the parts of the routine to one thread of this process, where it has OpenMP."""
+        ffi = cffi.FFI()
+        ffi.cdef("void omp_set_num_threads(int);")
+        with suppress(AttributeError):
+            ffi.dlopen(self._path).omp_set_num_threads(1)
 
     def __call__(self, arguments: Mapping[str, Any]) -> str | None:
         passed: list[Any] = []
