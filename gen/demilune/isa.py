@@ -34,16 +34,19 @@ class InstructionSet:
     machines: tuple[str, ...]
     """Machines that may have it, as :func:`platform.machine` calls them; none is all."""
     flags: tuple[str, ...]
-    """What the processor must have, as Linux lists it."""
+    """What the processor must have, as Linux lists it and compilers ask for it."""
     target: str
     """What compilers are told, so that files need no option."""
     header: str
-    at_run_time: str
-    """The condition in C under which this machine has it."""
     registers: Mapping[str, Mapping[str, str]] = field(compare=False, repr=False)
     """The primitives by type of register, such as ``float64x4``."""
     helpers: Mapping[str, str] = field(compare=False, repr=False)
     """Functions that the primitives call."""
+
+    @property
+    def compiles_here(self) -> bool:
+        """Whether a compiler for this machine knows its instructions."""
+        return not self.machines or platform.machine() in self.machines
 
     def widths(self, real: str) -> list[int]:
         """Lanes of the registers for a real type, from the narrowest to the widest."""
@@ -57,9 +60,7 @@ class InstructionSet:
     @property
     def here(self) -> bool:
         """Whether this machine can run it, as far as can be told."""
-        if self.machines and platform.machine() not in self.machines:
-            return False
-        return set(self.flags) <= processor_flags()
+        return self.compiles_here and set(self.flags) <= processor_flags()
 
     def functions(self, text: str) -> dict[str, str]:
         """The helper functions that ``text`` calls, each after those that it calls itself."""
@@ -92,7 +93,6 @@ def _read(path: Path) -> InstructionSet:
         flags=tuple(facts["flags"]),
         target=facts["target"],
         header=facts["header"],
-        at_run_time=facts["at_run_time"],
         registers={name: one for name, one in facts.items() if re.match(r"float\d+x\d+$", name)},
         helpers=facts.get("functions", {}),
     )

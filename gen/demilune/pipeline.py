@@ -16,6 +16,7 @@ from demilune.errors import DemiluneError, MissingError
 from demilune.evidence.outcome import Outcome, Row
 from demilune.evidence.page import page
 from demilune.evidence.record import EVIDENCE, PAGE, evidence_of, text_of
+from demilune.isa import INSTRUCTION_SETS
 from demilune.plan.build import make_plan
 from demilune.render import render
 from demilune.spec import Spec
@@ -147,6 +148,9 @@ def targets() -> list[dict[str, Any]]:
         else "fma = true works hosted, slowly; freestanding it is refused"
     )
     rows.append({"what": "fused multiply-add", "found": has_fma(), "detail": fma})
+    for one in INSTRUCTION_SETS.values():
+        how = "runs here" if one.here else "compiled, not run" if one.compiles_here else "written"
+        rows.append({"what": f"isa {one.name}", "found": one.here, "detail": f"{one.title}: {how}"})
     pages = "reads and writes outside an array are caught" if guard.AVAILABLE else guard.WHY_NOT
     rows.append({"what": "guard pages", "found": guard.AVAILABLE, "detail": pages})
     rows.append({"what": "compiled libraries", "found": True, "detail": str(cache.used_folder())})

@@ -115,7 +115,7 @@ class _Renderer(ExpressionWriter):
         for one in types:
             helpers |= one.get("functions", {})
         facts: dict[str, Any] = {"title": isa.title, "target": isa.target, "header": isa.header}
-        facts |= {"at_run_time": isa.at_run_time, "suffix": self.suffix, "functions": helpers}
+        facts |= {"flags": isa.flags, "suffix": self.suffix, "functions": helpers}
         self.suffix = ""
         return {**facts, "routines": routines, "types": types if self.language.lanes else []}
 
@@ -130,8 +130,18 @@ class _Renderer(ExpressionWriter):
         if not self.language.lanes:
             return facts
         macro = templates().get_template(f"{self.language.name}/lanes.j2").module
-        texts = [macro.primitive(facts, name) for name in names]  # type: ignore[attr-defined]
-        return {**facts, "primitives": texts, "functions": isa.functions("\n".join(texts))}
+        texts = [self._narrow(macro.primitive(facts, name)) for name in names]  # type: ignore[attr-defined]
+        called = isa.functions("\n".join(texts))
+        helpers = {name: self._narrow(source) for name, source in called.items()}
+        return {**facts, "primitives": texts, "functions": helpers}
+
+    def _narrow(self, text: str) -> str:
+        """The text with its long lines broken and its empty ones left out."""
+        lines = []
+        for line in filter(str.strip, text.split("\n")):
+            depth = (len(line) - len(line.lstrip())) // len(INDENT)
+            lines += self._broken(line.strip(), depth) if len(line) > WIDTH else [line]
+        return "\n".join(lines)
 
     def _types(self) -> list[str]:
         found = {one.type for plan in self.plans for one in plan.parameters if one.type != "size"}
@@ -183,7 +193,8 @@ class _Renderer(ExpressionWriter):
             "name": plan.routine.name + self.suffix, "reports": _reports(plan),
             "parameters": parameters,
         }  # fmt: skip
-        head = self.syntax["prototype"](facts) + ";"  # a declaration has one column more
+        inner = "static " if self.suffix else ""  # one of several versions in a file
+        head = inner + self.syntax["prototype"](facts) + ";"  # a declaration has one column more
         return "\n".join(self._broken(head, 0)).removesuffix(";")
 
     def _parameter(self, one: Parameter) -> dict[str, Any]:

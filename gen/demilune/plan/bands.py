@@ -87,11 +87,15 @@ class BandWalk(LaneWalk):
         else:
             far = [span + b + lanes * i for i in range(-(-(b + lanes - 2) // lanes))]
             low, high = k + b, k + b + span
+        w.comment("the slanted end of the stripe, of which each strip has its own part")
         for offset in far:
             edge = self._rows(b - 1)[1] if not self.whole_last else -self._rows(0)[0]
             near = offset if not self.whole_last else -(offset + lanes)
             self.w.when_known(Compare(near, "<", edge), partial(ragged, offset))
+        if (high - low).constant != 0:
+            w.comment(f"what all {b} strips have")
         self.c.each(low, high, full, steps=self.steps, fills=True)
+        w.comment("the square on the diagonal, of which each strip has its own part")
         for start in range(0, b, lanes):
             ragged(expr(start))
 

@@ -110,6 +110,8 @@ class LaneWalk(Walk):
 
     def _run(self, piece: Piece, low: Expr, high: Expr, strips: list[Named]) -> None:
         edge = self.edge
+        if len(strips) > 1 and (high - low).constant != 0:
+            self.w.comment(f"what all {len(strips)} strips have")
         if edge is None or len(strips) < self.block:
             super()._run(piece, low, high, strips)
             return
@@ -202,6 +204,8 @@ class LaneWalk(Walk):
             c = self.c.wide(None if some.constant == lanes else (expr(0), some))
             strip = Strip(strip.k)
         if wide[0].sum:
+            if size > 1:
+                self.w.comment("the sums of the strips, one a lane")
             total = self.c.folded(*(one.sum for one in wide))
             strip = replace(strip, sum=self.w.running("acc", total, self.c.parts))
         if diagonal is not None:
@@ -241,6 +245,8 @@ class LaneWalk(Walk):
                     here.append((replace(strip, active=(begin, end)), place(m)))
             if not here:
                 continue
+            if square:
+                self.w.comment("the square on the diagonal, of which each strip has its own part")
             ends = [strip.active[1] for strip, _ in here if strip.active]
             most = expr(min(lanes, reach - start)) if square else maximum(*ends)
             step = self.c.wide(None if most.constant == lanes else (expr(0), most))

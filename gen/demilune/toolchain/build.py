@@ -45,7 +45,13 @@ def compiled(compiler: Compiler, plans: list[Plan], files: Mapping[str, str]) ->
 
 
 def _loaded(compiler: Compiler, unit: Unit) -> list[Executable]:
+    sets = unit.plans[0].spec.target.instruction_sets
+    titles = " or ".join(one.title for one in sets)
+    if not any(one.compiles_here for one in sets):
+        raise MissingError(f"sources are written, neither compiled nor run here: for {titles}")
     library = compiled(compiler, unit.plans, unit.files)
+    if not any(one.here for one in sets):
+        raise MissingError(f"compiled, not run: this machine has no {titles}")
     try:
         return [CExecutable(plan, library) for plan in unit.plans]
     except (OSError, AttributeError) as error:
