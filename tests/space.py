@@ -7,12 +7,18 @@ the program's own rules differ from them.
 from __future__ import annotations
 
 import itertools
+import platform
 import random
+import shutil
+import subprocess
+import tempfile
 from collections.abc import Callable, Sequence
 from functools import cache
+from pathlib import Path
 from typing import Any
 
 from demilune import make_plan, make_spec, render, verify
+from demilune.isa import INSTRUCTION_SETS
 from demilune.languages import LANGUAGES
 from demilune.layouts import LAYOUTS
 from demilune.operations import OPERATIONS
@@ -25,6 +31,14 @@ Choose = Callable[[str, Sequence[Any]], Any]
 SCALARS = ("runtime", 1, -1, 2, 0.5, 0.1)
 STRIDES = ("runtime", 1, 2, -1, -3)
 SIZES = ("runtime", "runtime", 1, 2, 3, 4, 5, 6, 7, 8, 12, 13)
+
+LANES = (1, 2, 4, 8, 16)
+X86_64 = ("avx2", "avx512")
+REGISTERS = {
+    32: {"avx2": 4, "avx512": 4, "neon": 4},
+    64: {"avx2": 2, "avx512": 2, "neon": 2},
+}
+"""The fewest lanes of a register, by bits of a number; powers of two above that fit too."""
 
 
 def draw(choose: Choose) -> dict[str, Any]:
@@ -62,9 +76,9 @@ def draw(choose: Choose) -> dict[str, Any]:
     loops = {"matvec": ("dot", "axpy", "fused"), "rank1": ("axpy",), "quadform": ("dot", "fused")}
     take("loop", loops[operation])
     take("block", tuple(b for b in (1, 2, 3, 4, 5, 8, 16) if b <= largest))
-    take("direction", ("forward", "backward"))
+    forward = take("direction", ("forward", "backward")) == "forward"
     unrolls = n != "runtime" and layout != "skyline" and kd != "runtime"
-    take("unroll", (1, "all") if unrolls else (1,))
+    take("unroll", (1, *((2, 3) if forward else ()), *(("all",) if unrolls else ())))
     accumulators = ["plain"]
     if dtype in ("float32", "complex64") or integer:
         accumulators.append("wide")
@@ -72,7 +86,11 @@ def draw(choose: Choose) -> dict[str, Any]:
         accumulators.append("compensated")
     if integer:
         accumulators += ["int64", "int32"]
-    take("accumulator", accumulators)
+    plain = take("accumulator", accumulators) == "plain"
+    beside = v["loop"] == "fused" or operation == "rank1" or (
+        operation == "matvec" and v["loop"] == "dot" and layout == "band"
+    )
+    lanes = take("lanes", LANES if plain and beside and forward and not integer else (1,))
     take("fma", (False,) if integer else (False, True))
     scalars = tuple(s for s in SCALARS if isinstance(s, int | str)) if integer else SCALARS
     if operation != "quadform":
@@ -81,8 +99,15 @@ def draw(choose: Choose) -> dict[str, Any]:
         take("beta", (0, *scalars))
         take("incy", STRIDES)
     take("incx", STRIDES)
-    take("language", tuple(LANGUAGES))
-    take("environment", ("hosted", "freestanding"))
+    language = take("language", tuple(LANGUAGES))
+    environment = take("environment", ("hosted", "freestanding"))
+    if language == "c" and environment == "hosted" and plain and not integer:
+        widths = REGISTERS[64 if dtype in ("float64", "complex128") else 32]
+        sets = {name for name, least in widths.items() if lanes >= least}
+        runtime = ("runtime",) if sets >= set(X86_64) else ()
+        take("isa", ("portable", *sorted(sets), *runtime))
+    else:
+        take("isa", ("portable",))
     return v
 
 
@@ -139,26 +164,50 @@ def pairwise() -> tuple[tuple[dict[str, Any], ...], int]:
 
 # --- building and verifying many at a time -------------------------------------------------------
 
+CROSS_COMPILERS = {"neon": "aarch64-linux-gnu-gcc"}
+"""What compiles for instructions of another kind of machine than this."""
 
-def verify_all(values: Sequence[dict[str, Any]], optimise: bool = True) -> list[str]:
-    """Builds and verifies specifications, many in a file; gives what failed."""
-    specs = [make_spec(f"k{i}", **one) for i, one in enumerate(values)]
-    units = []
+
+def verify_all(values: Sequence[dict[str, Any]]) -> list[str]:
+    """Builds and verifies specifications, many in a file; gives what failed.
+
+    What this machine cannot run is compiled only, where there is a compiler for it.
+    """
+    units, failures = [], []
     groups: dict[tuple[Any, ...], list[Spec]] = {}
-    for spec in specs:
-        key = (spec.language, spec.target.environment, spec.arithmetic.fma)
+    for spec in (make_spec(f"k{i}", **one) for i, one in enumerate(values)):
+        key = (spec.language, spec.target.environment, spec.target.isa, spec.arithmetic.fma)
         groups.setdefault(key, []).append(spec)
-    for (language, *_), members in groups.items():
+    for (language, _, isa, _), members in groups.items():
         plans = [make_plan(spec) for spec in members]
-        units.append(Unit("many", language, plans, render(plans, "many", language)))
-    failures = []
+        files = render(plans, "many", language)
+        machines = [one.machines for one in members[0].target.instruction_sets]
+        if all(not some or platform.machine() in some for some in machines):
+            units.append(Unit("many", language, plans, files))
+        elif shutil.which(CROSS_COMPILERS.get(isa, "")):
+            failures += _not_compiled(CROSS_COMPILERS[isa], files)
     for unit in build_units(units):
         if unit.error is not None:
             failures.append(str(unit.error))
             continue
         for plan, executable in zip(unit.plans, unit.executables, strict=True):
+            isa = plan.spec.target.isa
+            if isa != "runtime" and not INSTRUCTION_SETS[isa].here:
+                continue
             verdict = verify(plan, executable)
             if not verdict.verified:
                 messages = [m for level in verdict.levels for m in level.failures]
                 failures.append(f"{plan.spec.stated}: {messages}")
     return failures
+
+
+def _not_compiled(compiler: str, files: dict[str, str]) -> list[str]:
+    """What the compiler says against the files."""
+    with tempfile.TemporaryDirectory() as folder:
+        for name, text in files.items():
+            Path(folder, name).write_text(text, encoding="utf-8")
+        done = subprocess.run(
+            [compiler, "-std=c99", "-Wall", "-Wextra", "-Werror", "-O1", "-S", "many.c"],
+            cwd=folder, capture_output=True, text=True, check=False,
+        )  # fmt: skip
+    return [done.stderr[:3000]] if done.returncode else []

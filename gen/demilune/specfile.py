@@ -22,6 +22,7 @@ from typing import Any
 
 from demilune.errors import InputError, Problem, SpecError
 from demilune.files import contents
+from demilune.isa import PORTABLE
 from demilune.keys import defaults_of, nearest
 from demilune.languages import LANGUAGES
 from demilune.layouts import LAYOUTS
@@ -132,6 +133,7 @@ def expand(
     under the same name. Defaults that a kernel's operation or layout has no use for are left out.
     """
     given = {**_usable(table, defaults or {}), **table}
+    everywhere = "language" not in given
     given.setdefault("language", [name for name, one in LANGUAGES.items() if one.default])
     lists = {key: value if isinstance(value, list) else [value] for key, value in given.items()}
     problems = list(_list_problems(name, lists))
@@ -145,6 +147,8 @@ def expand(
     made: dict[tuple[str, str], Spec] = {}
     for combination in itertools.product(*lists.values()):
         values = _fitting(dict(zip(lists, combination, strict=True)), lists)
+        if everywhere and not _in_language(values):
+            continue
         variant = "_".join([name, *(_short(key, values[key]) for key in varied if key in values)])
         try:
             spec = make_spec(variant, **values)
@@ -157,6 +161,11 @@ def expand(
     if problems:
         raise SpecError(list(dict.fromkeys(problems)))
     return list(made.values())
+
+
+def _in_language(values: Mapping[str, Any]) -> bool:
+    """Whether a kernel makes sense in a language that nobody asked for."""
+    return values.get("isa", PORTABLE) == PORTABLE or LANGUAGES[values["language"]].lanes
 
 
 def _list_problems(name: str, lists: Mapping[str, list[Any]]) -> Iterator[Problem]:
