@@ -6,6 +6,7 @@ The copy gets the files of ``tests/additions/`` (or rows of a table), and nothin
 from __future__ import annotations
 
 import os
+import platform
 import shutil
 import subprocess
 import sys
@@ -62,6 +63,9 @@ def test_an_operation_is_a_file(copy):
     real = {"operation": "rank2", "layout": layouts, "alpha": "runtime", "incy": "runtime"}
     hermitian = {**real, "dtype": "complex128", "structure": "hermitian", "block": 2}
     run(copy, [real, {**hermitian, "incx": "runtime"}, {**real, "dtype": "int16"}], 36)
+    # Lanes and threads are the walk's: the operation does not know of them.
+    lanes = {**real, "lanes": 4, "block": [1, 4], "triangle": ["upper", "lower"]}
+    run(copy, [lanes, {**hermitian, "lanes": 2}, {**real, "layout": "packed", "threads": 3}], 36)
 
 
 def test_a_loop_order_is_a_row(copy):
@@ -91,6 +95,18 @@ def test_a_dtype_is_two_rows(copy):
     layouts = ["full", "packed", "band", "rfp", "tiled", "skyline"]
     kernels = {"dtype": "int8", "layout": layouts, "accumulator": ["plain", "wide", "int32"]}
     run(copy, [kernels, {**kernels, "operation": "rank1"}], 72)
+
+
+@pytest.mark.skipif(platform.machine() != "x86_64", reason="its registers are those of x86-64")
+def test_an_instruction_set_is_a_table(copy):
+    shutil.copy(ADDITIONS / "isa_sse2.toml", copy / "templates/c/isa/sse2.toml")
+    layouts = ["full", "packed", "band", "rfp", "tiled", "skyline"]
+    shape = {"isa": "sse2", "layout": layouts, "triangle": ["upper", "lower"]}
+    double = {**shape, "lanes": [2, 4], "block": 4}
+    single = {**shape, "dtype": "float32", "lanes": 8, "block": [3, 8], "unroll": 2}
+    hermitian = {**shape, "dtype": "complex64", "structure": "hermitian", "lanes": 4, "block": 2}
+    update = {**double, "operation": ["rank1", "quadform"]}
+    run(copy, [double, single, hermitian, update], 100)
 
 
 def test_a_language_is_a_folder(copy):

@@ -52,6 +52,10 @@ class InstructionSet:
         """Lanes of the registers for a real type, from the narrowest to the widest."""
         return sorted(lanes_of(type) for type in self.registers if real_of(type) == real)
 
+    def fuses(self, real: str) -> bool:
+        """Whether it has a fused multiply-add."""
+        return all("fma" in self.registers[f"{real}x{width}"] for width in self.widths(real))
+
     def width(self, type: str) -> int | None:
         """Lanes of the widest register that so many lanes fill without a rest."""
         fitting = [w for w in self.widths(real_of(type)) if lanes_of(type) % w == 0]

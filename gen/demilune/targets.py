@@ -56,3 +56,6 @@ class Target:
                         f"a multiple of one, not {arithmetic.lanes}",
                     )
                     return
+                if arithmetic.fma and not one.fuses(arithmetic.real):
+                    yield "fma", f'"{one.name}" has no fused multiply-add; leave fma at false'
+                    return

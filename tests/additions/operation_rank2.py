@@ -83,22 +83,24 @@ class RankTwo(Operation):
         if c.layout.hermitian and c.layout.order == "column-major":
             x, y = conjugate(x), conjugate(y)
         alpha = self.scalar(c, "alpha", False)
-        return Strip(
-            k, factor=c.w.bind("t", scaled(c, alpha, y)), sum=c.w.bind("u", scaled(c, alpha, x))
-        )
+        t, u = c.w.bind("t", scaled(c, alpha, y)), c.w.bind("u", scaled(c, alpha, x))
+        return Strip(k, factor=(*t, *u))
 
     def _updated(self, c: Context, strip: Strip, old: Number, x: Number, y: Number) -> Number:
         if c.layout.hermitian and c.layout.order == "row-major":
             x, y = conjugate(x), conjugate(y)
-        first = c.arithmetic.multiply_add(old, x, strip.factor)
-        return convert(c.arithmetic.multiply_add(first, y, strip.sum), c.arithmetic.real)
+        t, u = strip.factor[: c.parts], strip.factor[c.parts :]
+        first = c.arithmetic.multiply_add(old, x, t)
+        return convert(c.arithmetic.multiply_add(first, y, u), c.arithmetic.real)
 
     def element(self, c: Context, m: Expr, strips: list[tuple[Strip, Expr]], own: bool) -> None:
         x, y = self._pair(c, m, "m")
         for strip, place in strips:
-            c.w.store("a", place, self._updated(c, strip, c.matrix(place), x, y))
+            old = c.matrix(place, strip.active)
+            c.put_matrix(strip, place, self._updated(c, strip, old, x, y))
 
-    def diagonal(self, c: Context, strip: Strip, place: Expr) -> None:
+    def diagonal(self, c: Context, strip: Strip, *places: Expr) -> None:
+        (place,) = places
         x, y = self._pair(c, strip.k, "k")
         stored = self._updated(c, strip, c.on_diagonal(place), x, y)
         if c.layout.hermitian:  # the imaginary part is not read, and set to zero

@@ -45,6 +45,7 @@ class Strip:
 
     k: Expr
     factor: Number = ()
+    """What the elements of the strip are multiplied with, or several such numbers."""
     sum: Number = ()
     sum_from: Number = ()
     """What the sum starts at."""
@@ -168,6 +169,11 @@ class Context:
         """The stored element at ``index``, in the type of the sums."""
         a = self.arithmetic
         return convert(self.load("a", index, a.real, a.type.complex, self.stride, active), a.sums)
+
+    def put_matrix(self, strip: Strip, index: Expr, number: Number) -> None:
+        """Writes the stored element at ``index``, or those of a step that the strip has."""
+        active = strip.active or self.active
+        self.w.store("a", index, convert(number, self.arithmetic.real), active=active)
 
     def on_diagonal(self, *places: Expr) -> Number:
         """The diagonal element at a place; of a Hermitian matrix only its real part is read.

@@ -93,9 +93,8 @@ class RankOne(Operation):
         if c.layout.hermitian and not self._columns(c):
             x = conjugate(x)
         for strip, place in strips:
-            active = strip.active or c.active
-            total = c.arithmetic.multiply_add(c.matrix(place, active), x, strip.factor)
-            c.w.store("a", place, convert(total, c.arithmetic.real), active=active)
+            old = c.matrix(place, strip.active)
+            c.put_matrix(strip, place, c.arithmetic.multiply_add(old, x, strip.factor))
 
     def diagonal(self, c: Context, strip: Strip, *places: Expr) -> None:
         (place,) = places

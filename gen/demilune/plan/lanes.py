@@ -185,7 +185,8 @@ class LaneWalk(Walk):
     def _widened(self, strip: Strip) -> Strip:
         """The strip as its lanes see it: its factor in all of them, and a sum in each."""
         w, wide, parts = self.w, self.c.wide(), self.c.parts
-        factor = w.bind("tk", wide.spread(strip.factor), parts) if strip.factor else ()
+        factors = [strip.factor[i : i + parts] for i in range(0, len(strip.factor), parts)]
+        factor = tuple(part for one in factors for part in w.bind("tk", wide.spread(one)))
         total = w.running("sum", wide.spread(strip.sum_from), parts) if strip.sum else ()
         return Strip(strip.k, factor=factor, sum=total)
 
