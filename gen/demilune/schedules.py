@@ -12,6 +12,7 @@ from dataclasses import dataclass
 
 from demilune.keys import key
 from demilune.layouts import Diagonal, Group, Layout, Piece
+from demilune.plan.panels import can_be_cut
 
 LARGEST_BLOCK = 16
 LARGEST_UNROLLED = 32
@@ -71,6 +72,10 @@ class Schedule:
     direction: str = key(
         "forward", "from the first strip to the last, or back", words=("forward", "backward")
     )
+    panel: int = key(
+        0, "indices of x and y that are worked on at a time, in whole strips if 0; for caches",
+        whole=True, minimum=0, maximum=2**20,
+    )  # fmt: skip
     threads: int = key(
         1, "parts that may run at the same time (OpenMP); the same bits whatever runs them",
         whole=True, minimum=1, maximum=MOST_THREADS,
@@ -146,8 +151,20 @@ class Schedule:
             )
         if self.threads > 1:
             yield from self._thread_problems(layout, lanes, in_place)
+        if self.panel:
+            yield from self._panel_problems(layout, mirrored)
         if self.steps > 1 and self.backward:
             yield "unroll", 'steps are written out with direction = "forward" only'
+
+    def _panel_problems(self, layout: Layout, mirrored: bool) -> Iterator[tuple[str, str]]:
+        if not can_be_cut(layout.groups()):
+            yield "panel", f'the strips of layout "{layout.name}" do not all reach to one end'
+        elif self.order.mirrored and mirrored:
+            yield "panel", f'the loop order "{self.loop}" ends each sum at once; use "fused"'
+        if self.panel % self.block:
+            yield "panel", f"a panel of {self.panel} is no multiple of the block, {self.block}"
+        if self.threads > 1 or self.backward:
+            yield "panel", "panels go with one thread, and forward"
 
     def _thread_problems(
         self, layout: Layout, lanes: int, in_place: bool

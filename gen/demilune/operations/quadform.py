@@ -123,7 +123,9 @@ class QuadForm(Operation):
         row = strip.sum
         if not c.order.mirrored:
             twice = w.bind("twice", a.doubled(row), c.parts)
-            row = w.bind("row", a.accumulate(w, twice, strip.diagonal, x), c.parts)
+            row = twice
+            if strip.diagonal:
+                row = w.bind("row", a.accumulate(w, twice, strip.diagonal, x), c.parts)
         left = conjugate(x) if c.layout.hermitian else x
         totals = c.lane_totals if c.lanes > 1 else c.totals
         w.assign(totals, a.accumulate_sum(w, totals, left, row))

@@ -10,6 +10,7 @@ from demilune.index import Compare, Expr, Extreme, expr, maximum, minimum, quoti
 from demilune.keys import RUNTIME
 from demilune.layouts import Diagonal, Group, Piece, Range
 from demilune.operations import Context, Strip
+from demilune.plan.panels import in_panels
 from demilune.plan.parts import in_parts
 
 if TYPE_CHECKING:
@@ -39,8 +40,14 @@ class Walk:
 
     @property
     def in_parts(self) -> tuple[str, ...]:
-        """How the strips are parted, in sentences."""
-        threads = self.spec.schedule.threads
+        """How the strips are parted or cut, in sentences."""
+        threads, panel = self.spec.schedule.threads, self.spec.schedule.panel
+        if panel:
+            return (
+                f"Indices m are cut into panels of {panel}, and one panel is done after the other: "
+                "a strip begins and ends anew in each panel that it meets, its diagonal belongs "
+                "to one.",
+            )
         if threads == 1:
             return ()
         return (
@@ -61,8 +68,16 @@ class Walk:
             if threads > 1:
                 in_parts(self, group, threads)
                 continue
+            if self.spec.schedule.panel:
+                panel, both = in_panels(group, self.spec.schedule.panel)
+                self._nest((panel,), partial(self._groups, both))
+                continue
             self._nest(group.around, partial(self._group, group))
         self.operation.epilogue(self.c)
+
+    def _groups(self, groups: tuple[Group, ...], by: dict[str, Expr]) -> None:
+        for group in groups:
+            self._group(group, by)
 
     def _refuse(self) -> None:
         if self.layout.n == RUNTIME:
