@@ -64,6 +64,10 @@ class Vector:
     type: str
     complex: bool
 
+    @property
+    def parts(self) -> int:
+        return 2 if self.complex else 1
+
     def at(self, i: Term) -> Expr:
         return self.start + expr(i) * self.stride
 
@@ -83,6 +87,10 @@ class Context:
     """The sums over all strips while those of a part stand in their place."""
     lane_totals: Number = ()
     """The same, a sum a lane."""
+    holds: bool = False
+    """Whether all elements of vectors are kept in locals, of a routine without loops."""
+    scattered: str = ""
+    """The vector that strips add to, if they scatter."""
     held: dict[tuple[str, Expr], Number] = field(default_factory=dict)
     """Elements of vectors that are in locals for a while, by vector and first index."""
     lanes: int = 1
@@ -190,10 +198,26 @@ class Context:
 
     def vector(self, name: str, i: Term) -> Number:
         """Element ``i`` of a vector, in its own type."""
-        v = self.vectors[name]
-        if self.lanes > 1 and (name, expr(i)) in self.held:
-            return self.held[name, expr(i)]
-        return self.load(v.array, v.at(i), v.type, v.complex, v.stride)
+        v, key = self.vectors[name], (name, expr(i))
+        if key in self.held and (self.lanes > 1 or self.holds):
+            return self.held[key]
+        number = self.load(v.array, v.at(i), v.type, v.complex, v.stride)
+        if self.holds and self.w.outermost:
+            local = f"{name}_{key[1].constant}"
+            self.held[key] = self.w.declare(local, number, self._kept(name), v.parts)
+            return self.held[key]
+        return number
+
+    def _kept(self, name: str) -> bool:
+        """Whether elements of a vector change in locals, and are written at the end."""
+        return self.holds and name == self.scattered
+
+    def release(self) -> None:
+        """Writes what was kept in locals, and forgets them."""
+        for (name, i), number in self.held.items():
+            if self._kept(name):
+                self.w.store(name, self.vectors[name].at(i), number)
+        self.held.clear()
 
     def term(self, name: str, i: Term) -> Number:
         """Element ``i`` of a vector, in the type of the sums."""
@@ -210,7 +234,14 @@ class Context:
         """Writes element ``i`` of a vector, rounded to its type."""
         v = self.vectors[name]
         number = convert(number, v.type)
-        if self.lanes == 1:
+        if self._kept(name) and self.w.outermost:
+            key = (name, expr(i))
+            if key in self.held:
+                self.w.assign(self.held[key], number)
+            else:
+                local = f"{name}_{key[1].constant}"
+                self.held[key] = self.w.declare(local, number, True, v.parts)
+        elif self.lanes == 1:
             self.w.store(v.array, v.at(i), number)
         elif (name, expr(i)) in self.held:
             self.w.assign(self.held[name, expr(i)], number)

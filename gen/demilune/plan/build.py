@@ -51,6 +51,8 @@ def make_plan(spec: Spec) -> Plan:
     names += [one.name + part for one in parameters if one.complex for part in PARTS]
     w = Writer((*names, spec.name), unroll=spec.schedule.written_out)
     c = Context(w, spec.layout, spec.arithmetic, order)
+    c.holds = spec.schedule.written_out and spec.arithmetic.lanes == 1
+    c.scattered = spec.operation.scattered if order.scatter and spec.arithmetic.in_place else ""
     walk = walk_for(spec)(spec, c)
     walk.all()
     sentences = walk.statement()

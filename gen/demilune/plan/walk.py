@@ -74,6 +74,7 @@ class Walk:
                 continue
             self._nest(group.around, partial(self._group, group))
         self.operation.epilogue(self.c)
+        self.c.release()
 
     def _groups(self, groups: tuple[Group, ...], by: dict[str, Expr]) -> None:
         for group in groups:

@@ -53,6 +53,11 @@ class Writer:
         """What was written in the outermost block."""
         return tuple(self._blocks[0])
 
+    @property
+    def outermost(self) -> bool:
+        """Whether what is written now is not inside any block."""
+        return len(self._blocks) == 1
+
     # --- names and blocks ------------------------------------------------------------------
 
     def _free(self, *names: str) -> tuple[str, ...]:
