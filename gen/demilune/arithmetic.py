@@ -74,6 +74,9 @@ def _negate(value: Value) -> Value:
 
 
 def add(left: Number, right: Number) -> Number:
+    """The sum; a left side that is known to be 0 is left out."""
+    if all(isinstance(one, Constant) and one.value == 0 for one in left):
+        return right
     return tuple(_add(p, q) for p, q in zip(left, right, strict=True))
 
 
@@ -229,7 +232,12 @@ class Arithmetic:
         return tuple(result)
 
     def multiply_add(self, total: Number, left: Number, right: Number) -> Number:
-        """``total + left * right``; one part of the result for each part of ``total``."""
+        """``total + left * right``; one part of the result for each part of ``total``.
+
+        A ``total`` that is known to be 0 is left out.
+        """
+        if all(isinstance(one, Constant) and one.value == 0 for one in total):
+            return self.multiply(left, right)[: len(total)]
         if not self.fma:
             product = self.multiply(left, right)
             return add(total, product[: len(total)])

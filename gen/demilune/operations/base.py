@@ -108,6 +108,23 @@ class Context:
     def parts(self) -> int:
         return self.arithmetic.type.parts
 
+    def sum_from_zero(self) -> Number:
+        """A new sum of a strip; in a routine without loops it begins with its first product."""
+        zero = self.spread(self.arithmetic.zero(self.parts))
+        return zero if self.begins else self.w.running("acc", zero, self.parts)
+
+    def set_sum(self, strip: Strip, number: Number) -> None:
+        """Gives the sum of a strip a new value."""
+        if all(isinstance(one, Constant) for one in strip.sum):
+            strip.sum = self.w.running("acc", number, self.parts)
+        else:
+            self.w.assign(strip.sum, number)
+
+    @property
+    def begins(self) -> bool:
+        """Whether sums begin with their first product, and not with 0."""
+        return self.holds and not self.arithmetic.compensated
+
     def wide(self, active: Active = None) -> Context:
         """The context in which a step works on all lanes, or on the ``active`` ones."""
         return replace(self, lanes=self.arithmetic.lanes, active=active)
@@ -236,7 +253,10 @@ class Context:
         number = convert(number, v.type)
         if self._kept(name) and self.w.outermost:
             key = (name, expr(i))
-            if key in self.held:
+            known = key in self.held
+            if self.begins and all(isinstance(one, Constant) for one in number):
+                self.held[key] = number
+            elif known and not all(isinstance(one, Constant) for one in self.held[key]):
                 self.w.assign(self.held[key], number)
             else:
                 local = f"{name}_{key[1].constant}"

@@ -194,7 +194,7 @@ class MatVec(Operation):
             strip.factor = c.w.bind("t", x)
         if c.order.gather:
             strip.sum_from = c.arithmetic.zero(c.parts)
-            strip.sum = c.w.running("acc", c.spread(strip.sum_from), c.parts)
+            strip.sum = c.sum_from_zero()
         return strip
 
     def element(self, c: Context, m: Expr, strips: list[tuple[Strip, Expr]], own: bool) -> None:
@@ -220,7 +220,7 @@ class MatVec(Operation):
                     self._add_to(c, m, column, strip.factor)
             if order.gather:
                 added = a.accumulate(w, strip.sum, c.in_row(stored, own), x)
-                w.assign(strip.sum, c.where(strip, added, strip.sum))
+                c.set_sum(strip, c.where(strip, added, strip.sum))
         if order.scatter and several:
             self._keep(c, m, add(self._cell(c, m), cell) if apart else cell)
 
@@ -231,7 +231,7 @@ class MatVec(Operation):
         if c.order.gather:
             x = c.term("x", strip.k)
             x = c.w.bind("xk", x) if c.reused else x
-            c.w.assign(strip.sum, c.arithmetic.accumulate(c.w, strip.sum, d, x))
+            c.set_sum(strip, c.arithmetic.accumulate(c.w, strip.sum, d, x))
         else:
             self._add_to(c, strip.k, d, strip.factor)
 

@@ -96,7 +96,7 @@ class QuadForm(Operation):
 
     def open(self, c: Context, k: Expr) -> Strip:
         zero = c.arithmetic.zero(c.parts)
-        return Strip(k, sum=c.w.running("acc", c.spread(zero), c.parts), sum_from=zero)
+        return Strip(k, sum=c.sum_from_zero(), sum_from=zero)
 
     def element(self, c: Context, m: Expr, strips: list[tuple[Strip, Expr]], own: bool) -> None:
         x = c.term("x", m)
@@ -106,7 +106,7 @@ class QuadForm(Operation):
             stored = c.w.bind("akm", stored) if c.reused else stored
             row = c.in_row(stored, own)
             added = c.arithmetic.accumulate(c.w, strip.sum, row, x)
-            c.w.assign(strip.sum, c.where(strip, added, strip.sum))
+            c.set_sum(strip, c.where(strip, added, strip.sum))
 
     def diagonal(self, c: Context, strip: Strip, *places: Expr) -> None:
         d = c.w.bind("akk", c.on_diagonal(*places))
@@ -115,7 +115,7 @@ class QuadForm(Operation):
             return
         x = c.term("x", strip.k)
         x = c.w.bind("xk", x) if c.reused else x
-        c.w.assign(strip.sum, c.arithmetic.accumulate(c.w, strip.sum, d, x))
+        c.set_sum(strip, c.arithmetic.accumulate(c.w, strip.sum, d, x))
 
     def close(self, c: Context, strip: Strip) -> None:
         a, w = c.arithmetic, c.w

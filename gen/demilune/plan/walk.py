@@ -36,7 +36,10 @@ class Walk:
 
     def statement(self) -> tuple[str, ...]:
         """The order of the sums in sentences."""
-        return self.operation.statement(self.c, self.backward, self.block) + self.in_parts
+        sentences = self.operation.statement(self.c, self.backward, self.block) + self.in_parts
+        if self.c.begins and self.operation.sums:
+            return (*sentences, "A sum that starts at 0 begins with its first product.")
+        return sentences
 
     @property
     def in_parts(self) -> tuple[str, ...]:
