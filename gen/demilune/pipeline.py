@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import os
 import platform
-from collections.abc import Callable, Iterable, Mapping
+from collections.abc import Callable, Iterable, Mapping, Sequence
 from pathlib import Path
 from typing import Any
 
@@ -12,6 +12,8 @@ from demilune import files
 from demilune.bench import guard
 from demilune.bench.levels import verify
 from demilune.bench.selfcheck import selfcheck as plant
+from demilune.boards.board import Board
+from demilune.boards.check import Report, check_all
 from demilune.errors import DemiluneError, MissingError
 from demilune.evidence.outcome import Outcome, Row
 from demilune.evidence.page import page
@@ -52,17 +54,29 @@ def all_files(units: Iterable[Unit]) -> dict[str, str]:
 
 
 def check(
-    specs: Iterable[Spec], seed: int = 1, progress: Progress = silent, *, selfcheck: bool = False
+    specs: Iterable[Spec],
+    seed: int = 1,
+    progress: Progress = silent,
+    *,
+    selfcheck: bool = False,
+    boards: Sequence[Board] = (),
 ) -> Outcome:
     """Emits, compiles and verifies all kernels; writes nothing but the compiler's cache.
 
     With ``selfcheck`` faults are planted into each verified kernel, and the bench must catch them.
     """
-    return check_units(units_of(specs, progress), seed, progress, selfcheck=selfcheck)
+    return check_units(
+        units_of(specs, progress), seed, progress, selfcheck=selfcheck, boards=boards
+    )
 
 
 def check_units(
-    units: list[Unit], seed: int = 1, progress: Progress = silent, *, selfcheck: bool = False
+    units: list[Unit],
+    seed: int = 1,
+    progress: Progress = silent,
+    *,
+    selfcheck: bool = False,
+    boards: Sequence[Board] = (),
 ) -> Outcome:
     """Compiles and verifies what has been emitted."""
     ready: list[Unit] = []
@@ -87,7 +101,22 @@ def check_units(
     if selfcheck:
         for row in outcome.rows:
             _plant(row, seed, progress)
+    if boards:
+        _on_boards(outcome, boards, seed, progress)
     return outcome
+
+
+def _on_boards(outcome: Outcome, boards: Sequence[Board], seed: int, progress: Progress) -> None:
+    """Checks on boards what was verified here."""
+    files = {(plan.spec.file, plan.spec.language) for plan in outcome.routines}
+    total = sum(board.language == language for _, language in files for board in boards)
+    progress("on boards", 0, total)
+
+    def told(report: Report) -> None:
+        outcome.boards.append(report)
+        progress(f"{report.file} on {report.board}", len(outcome.boards), total)
+
+    check_all(boards, outcome.routines, told, seed=seed)
 
 
 def _plant(row: Row, seed: int, progress: Progress) -> None:
@@ -115,12 +144,13 @@ def build(
     seed: int = 1,
     force: bool = False,
     progress: Progress = silent,
+    boards: Sequence[Board] = (),
 ) -> Outcome:
     """The whole job: writes the sources and the evidence of their verification to ``folder``."""
     units = units_of(specs, progress)
     sources = all_files(units)
     refuse_early(folder, sources, force)
-    outcome = check_units(units, seed, progress)
+    outcome = check_units(units, seed, progress, boards=boards)
     files.write_all(folder, {**sources, **report_files(outcome)}, force)
     return outcome
 

@@ -7,6 +7,7 @@ node; it puts in the parentheses, breaks long lines, and knows nothing of any la
 from __future__ import annotations
 
 import inspect
+import re
 from collections.abc import Iterable
 from typing import Any
 
@@ -133,6 +134,10 @@ class _Renderer(ExpressionWriter):
         texts = [self._narrow(macro.primitive(facts, name)) for name in names]  # type: ignore[attr-defined]
         called = isa.functions("\n".join(texts))
         helpers = {name: self._narrow(source) for name, source in called.items()}
+        if self.suffix:  # another instruction set of the file may call its own the same
+            own = re.compile(rf"\b({'|'.join(helpers)})\(") if helpers else None
+            texts = [own.sub(rf"\1{self.suffix}(", one) if own else one for one in texts]
+            helpers = {n: own.sub(rf"\1{self.suffix}(", t) for n, t in helpers.items() if own}
         return {**facts, "primitives": texts, "functions": helpers}
 
     def _narrow(self, text: str) -> str:
@@ -164,7 +169,7 @@ class _Renderer(ExpressionWriter):
         body += self._block(plan.routine.body, reports=_reports(plan), plan=plan)
         routine = {
             "name": plan.routine.name,
-            "arguments": ", ".join(n for p in plan.parameters for n in self._parameter(p)["names"]),
+            "arguments": ", ".join(name for one in plan.parameters for name in self._passed(one)),
             "title": title(plan),
             "parameters": [self._parameter(one) for one in plan.parameters],
             "reports": _reports(plan),
@@ -196,6 +201,11 @@ class _Renderer(ExpressionWriter):
         inner = "static " if self.suffix else ""  # one of several versions in a file
         head = inner + self.syntax["prototype"](facts) + ";"  # a declaration has one column more
         return "\n".join(self._broken(head, 0)).removesuffix(";")
+
+    def _passed(self, one: Parameter) -> list[str]:
+        """The names that stand for a parameter in a call."""
+        names: list[str] = self._parameter(one)["names"]
+        return names if one.kind == "scalar" else [one.name]
 
     def _parameter(self, one: Parameter) -> dict[str, Any]:
         names = [one.name + part for part in PARTS] if one.complex else [one.name]

@@ -39,6 +39,7 @@ from demilune.spec import (
 )
 
 TABLES = ("defaults", "kernel")
+BOARDS = "boards"
 LARGEST_PRODUCT = 100_000
 """Kernels that one file may stand for."""
 
@@ -50,6 +51,8 @@ class SpecFile:
     path: str
     text: str
     specs: tuple[Spec, ...]
+    boards: tuple[str, ...] = ()
+    """The boards on which routines are checked: names, or paths of files that describe them."""
 
 
 def read(path: str | Path) -> SpecFile:
@@ -60,7 +63,11 @@ def read(path: str | Path) -> SpecFile:
         text = data.decode("utf-8")
     except UnicodeDecodeError as error:
         raise InputError(f"{path}: not UTF-8 (byte {error.start}); TOML files are") from error
-    return SpecFile(str(path), text, parse(text, path.name))
+    specs = parse(text, path.name)
+    names = tomllib.loads(text.removeprefix("\ufeff")).get(BOARDS, [])
+    # A board's file is found from where the specification lies.
+    boards = [str(path.parent / name) if name.endswith(".toml") else name for name in names]
+    return SpecFile(str(path), text, specs, tuple(boards))
 
 
 def parse(text: str, file: str = "specification") -> tuple[Spec, ...]:
@@ -93,12 +100,15 @@ def parse(text: str, file: str = "specification") -> tuple[Spec, ...]:
 
 def _document_problems(document: Mapping[str, Any]) -> Iterator[Problem]:
     for key in document:
-        if key not in TABLES:
+        if key not in (*TABLES, BOARDS):
             yield Problem(
-                f"unknown table {shown(key)}{nearest(key, TABLES)} "
-                "(allowed: [defaults], [kernel.NAME])",
+                f"unknown table {shown(key)}{nearest(key, (*TABLES, BOARDS))} "
+                "(allowed: [defaults], [kernel.NAME], and boards = [...] before them)",
                 key=key,
             )
+    boards = document.get(BOARDS, [])
+    if not isinstance(boards, list) or not all(isinstance(one, str) for one in boards):
+        yield Problem(f"found {shown(boards)}, allowed is a list of names or files", key=BOARDS)
     for key in TABLES:
         if key in document and not isinstance(document[key], dict):
             yield Problem(f"found {shown(document[key])}, allowed is a table", key=key)
@@ -249,6 +259,12 @@ def schema() -> dict[str, Any]:
         "title": "Demilune specification",
         "type": "object",
         "properties": {
+            BOARDS: {
+                "description": "boards on which routines are checked: names, or files ending .toml",
+                "type": "array",
+                "items": {"type": "string"},
+                "uniqueItems": True,
+            },
             "defaults": {"$ref": "#/$defs/table", "description": "keys for every kernel"},
             "kernel": {
                 "type": "object",

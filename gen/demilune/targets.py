@@ -38,8 +38,8 @@ class Target:
 
     def problems(self, arithmetic: Arithmetic) -> Iterator[tuple[str, str]]:
         """Pairs of a key and why its value cannot be."""
-        if self.isa == PORTABLE:
-            return
+        if self.isa == PORTABLE or arithmetic.lanes == 1:
+            return  # without lanes there is nothing that vector instructions would do
         if self.language != "c":
             yield "isa", f'vector instructions are for C; with "{self.language}" use "portable"'
         elif self.environment == "freestanding":

@@ -14,6 +14,7 @@ import click
 from click.core import ParameterSource
 
 from demilune import files, pipeline, storage
+from demilune.boards.board import find_board
 from demilune.cli import show
 from demilune.cli.starter import STARTER
 from demilune.errors import DemiluneError, InputError
@@ -92,7 +93,7 @@ def main() -> None:
     """
 
 
-def _specs(source: SpecFile, only: tuple[str, ...], whole: bool = False) -> list[Spec]:
+def kernels_of(source: SpecFile, only: tuple[str, ...], whole: bool = False) -> list[Spec]:
     """The kernels that are asked for; ``whole`` adds those that share a file with one."""
     if not only:
         return list(source.specs)
@@ -142,7 +143,7 @@ def plan(spec: Path, only: tuple[str, ...], as_json: bool) -> None:
     Example: demilune plan examples/buoy_estimator.toml
     """
     plans: dict[str, Plan] = {}
-    for one in _specs(read(spec), only):
+    for one in kernels_of(read(spec), only):
         plans.setdefault(one.name, make_plan(one))
     records = [plan_record(made) for made in plans.values()]
     if as_json:
@@ -211,7 +212,7 @@ def emit(
     """
     with show.progress(quiet) as progress:
         texts = pipeline.all_files(
-            pipeline.units_of(_specs(read(spec), only, whole=True), progress)
+            pipeline.units_of(kernels_of(read(spec), only, whole=True), progress)
         )
     if check or diff:
         stale = [n for n, text in texts.items() if files.current(folder / n) != text]
@@ -288,11 +289,12 @@ def verify(
         return _replay(recorded, folder, force, as_json, quiet)
     if spec is None:
         raise click.UsageError("Missing argument 'SPEC'; or repeat a run with --replay.", context)
-    specs = _specs(read(spec), only)
+    source = read(spec)
+    specs, boards = kernels_of(source, only), [find_board(name) for name in source.boards]
     folder = folder or Path("build_out")
     pipeline.refuse_early(folder, {}, force)
     with show.progress(quiet) as progress:
-        result = pipeline.check(specs, seed, progress, selfcheck=selfcheck)
+        result = pipeline.check(specs, seed, progress, selfcheck=selfcheck, boards=boards)
     files.write_all(folder, pipeline.report_files(result), force)
     if as_json:
         show.as_json(evidence_of(result))
@@ -335,9 +337,13 @@ def build(
 
     Example: demilune build examples/buoy_estimator.toml
     """
-    specs = _specs(read(spec), only, whole=True)
+    source = read(spec)
+    specs = kernels_of(source, only, whole=True)
+    boards = [find_board(name) for name in source.boards]
     with show.progress(quiet) as progress:
-        result = pipeline.build(specs, folder, seed=seed, force=force, progress=progress)
+        result = pipeline.build(
+            specs, folder, seed=seed, force=force, progress=progress, boards=boards
+        )
     if as_json:
         show.as_json(evidence_of(result))
     else:

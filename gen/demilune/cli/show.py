@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import json
 import sys
-from collections.abc import Iterator
+from collections.abc import Iterator, Sequence
 from contextlib import contextmanager
 from typing import Any
 
@@ -13,6 +13,7 @@ from rich.progress import BarColumn, MofNCompleteColumn, Progress, TextColumn, T
 from rich.table import Table
 from rich.text import Text
 
+from demilune.boards.check import Report as BoardReport
 from demilune.errors import DemiluneError, SpecError
 from demilune.evidence.outcome import Outcome
 from demilune.evidence.replay import AGREES, DIFFERS, LEFT_OUT, NOTHING, Replay
@@ -100,10 +101,50 @@ def outcome(result: Outcome) -> None:
         names = [r.spec.name for r in result.rows if r.status == "left out" and r.reason == reason]
         shown.print(Text(f"left out: {', '.join(names)}"), soft_wrap=True)
         shown.print(Text(f"  why, and how to get it: {reason}"), soft_wrap=True)
+    if result.boards:
+        boards(result.boards)
     counts = [f"{n} {s}" for s in COLOURS if (n := sum(r.status == s for r in result.rows))]
     shown.print(Text(f"{len(result.rows)} kernels: {', '.join(counts)}"), soft_wrap=True)
     if result.selfcheck:
         _planted(result, shown)
+
+
+BOARDS = {"agrees": "green", "missing": "yellow"}
+
+
+def boards(reports: Sequence[BoardReport]) -> None:
+    """What became of routines on boards, and what they cost there."""
+    table = Table(box=None, pad_edge=False, header_style="bold")
+    names = (
+        "board",
+        "routine",
+        "verdict",
+        "cases",
+        "code",
+        "stack",
+        "instructions",
+        "loads",
+        "stores",
+    )
+    for place, name in enumerate(names):
+        table.add_column(name, justify="left" if place < 3 else "right")
+    for report in reports:
+        verdict = Text(report.verdict, style=BOARDS.get(report.verdict, "bold red"))
+        for one in report.routines or (None,):
+            sizes, counts = (one.sizes, one.counts) if one else (None, None)
+            code = "" if sizes is None else str(sizes.code + sizes.library)
+            stack = "" if sizes is None or sizes.stack is None else str(sizes.stack)
+            calls = ("", "", "") if counts is None else (
+                str(counts.instructions), str(counts.loads), str(counts.stores)
+            )  # fmt: skip
+            name = one.kernel if one else report.file
+            table.add_row(report.board, name, verdict, str(report.cases), code, stack, *calls)
+    shown = console()
+    shown.print(table)
+    for report in reports:
+        if report.message:
+            shown.print(Text(f"{report.file} on {report.board}: {report.message}"), soft_wrap=True)
+    shown.print(Text("bytes, and counts of one call in an emulator: instructions are no cycles"))
 
 
 def _planted(result: Outcome, shown: Console) -> None:

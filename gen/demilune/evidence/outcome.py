@@ -6,10 +6,14 @@ from dataclasses import dataclass, field
 
 from demilune.bench.levels import Verdict
 from demilune.bench.selfcheck import Trial
+from demilune.boards.check import Report
 from demilune.errors import DemiluneError, MissingError
 from demilune.plan.build import Plan
 from demilune.spec import Spec
 from demilune.toolchain.build import Unit
+
+BOARD_STATUS = {"agrees": "verified", "missing": "left out"}
+"""What a verdict on a board means for the whole; all others are failures."""
 
 
 @dataclass
@@ -62,6 +66,8 @@ class Outcome:
     seed: int = 1
     selfcheck: bool = False
     """Whether faults were planted."""
+    boards: list[Report] = field(default_factory=list)
+    """What became of the routines on boards."""
 
     @property
     def status(self) -> int:
@@ -70,6 +76,7 @@ class Outcome:
         A planted fault that survives is a check that failed: that of the bench.
         """
         found = {row.status for row in self.rows}
+        found |= {BOARD_STATUS.get(report.verdict, "failed") for report in self.boards}
         verified = [row for row in self.rows if row.status == "verified"]
         if found & {"failed", "error"} or any(row.survivors or row.untried for row in verified):
             return 1
@@ -79,3 +86,8 @@ class Outcome:
     def missing(self) -> list[str]:
         """What was missing, each thing once."""
         return list(dict.fromkeys(row.reason for row in self.rows if row.status == "left out"))
+
+    @property
+    def routines(self) -> list[Plan]:
+        """The plans of what was verified."""
+        return [row.plan for row in self.rows if row.status == "verified"]

@@ -61,6 +61,7 @@ def evidence_of(outcome: Outcome) -> dict[str, Any]:
             "shared_by_all_levels": CALLED,
             "kernels": [kernel_record(row) for row in outcome.rows],
             "planted_faults": _planted_faults(outcome),
+            "boards": [report.record() for report in outcome.boards],
             "not_checked": list(_not_checked(outcome)),
         }
     )

@@ -1,5 +1,18 @@
-"""Kernels against the libraries of a machine and against its limits."""
+"""Kernels against the libraries of a machine and against its limits.
 
-from demilune.race.contest import Entry, Race, race
+>>> from demilune import expand
+>>> from demilune.race import libraries, race
+>>> kernels = expand("gauges", {"layout": "packed", "isa": "native", "language": "c"})
+>>> found = race(kernels, [256], libraries())          # doctest: +SKIP
+>>> found.row("gauges", 256).gflops                    # doctest: +SKIP
+41.7
 
-__all__ = ["Entry", "Race", "race"]
+Times are in seconds, speeds in operations a second unless a name says otherwise.
+"""
+
+from demilune.race.contest import race
+from demilune.race.entrants import LeftOut
+from demilune.race.peers import Library, libraries, library
+from demilune.race.record import Race, Row, Timing
+
+__all__ = ["LeftOut", "Library", "Race", "Row", "Timing", "libraries", "library", "race"]

@@ -2,8 +2,7 @@
 
 from __future__ import annotations
 
-import os
-import platform
+import datetime
 from collections.abc import Callable, Iterable, Mapping, Sequence
 from dataclasses import dataclass, field
 from typing import Any
@@ -11,280 +10,285 @@ from typing import Any
 import numpy as np
 import numpy.typing as npt
 
-from demilune.dtypes import REAL_SIZE
 from demilune.errors import InputError
-from demilune.isa import INSTRUCTION_SETS, native
 from demilune.keys import RUNTIME
-from demilune.plan.build import Plan, make_plan
-from demilune.race.driver import (
+from demilune.pipeline import Progress, silent
+from demilune.race.contestants import (
     Contestant,
-    Driver,
-    full_product,
     kernel_contestant,
     library_contestant,
-    limit_contestant,
+    peak_contestant,
+    set_team,
+    sum_contestant,
+    whole_contestant,
 )
-from demilune.race.peers import Library, routine_for, stored_for_fortran
-from demilune.render import render
+from demilune.race.driver import Driver
+from demilune.race.entrants import Entrant, LeftOut, entrants
+from demilune.race.machine import machine
+from demilune.race.peers import LETTERS, Library
+from demilune.race.peers import libraries as all_libraries
+from demilune.race.record import Race, Row, Timing
+from demilune.race.values import Memory, shaped, sizes_at, stored, useful, values_for
 from demilune.spec import Spec
-from demilune.toolchain.build import compiled
-from demilune.toolchain.compilers import Compiler, find_compiler
+from demilune.toolchain.build import flags_for
+from demilune.toolchain.compilers import find_compiler
 
 Array = npt.NDArray[Any]
-ALIGNMENT = 64
 ROUNDS, SLICE = 11, 0.002
-SCALARS = {"alpha": 0.75, "beta": 0.0}
-"""The scalars of kernels that are told them when called."""
-
-
-@dataclass(frozen=True)
-class Entry:
-    """One contestant at one size: the seconds of a call, round by round."""
-
-    label: str
-    kind: str
-    """``kernel``, ``library``, ``sum`` (the stored half summed) or ``full`` (a library's product
-    with the whole matrix)."""
-    n: int
-    seconds: tuple[float, ...]
-
-    @property
-    def median(self) -> float:
-        return float(np.median(self.seconds))
-
-    @property
-    def spread(self) -> float:
-        """The interquartile range as a part of the median."""
-        low, high = np.percentile(self.seconds, [25, 75])
-        return float((high - low) / self.median)
-
-
-@dataclass
-class Race:
-    """What was measured, and where."""
-
-    machine: dict[str, Any]
-    entries: list[Entry] = field(default_factory=list)
-    flops: dict[tuple[str, int], int] = field(default_factory=dict)
-    """Useful operations of a kernel at a size: the least that the job needs."""
-    peers: dict[tuple[str, int], dict[str, str]] = field(default_factory=dict)
-    """For each kernel and size, the label of its contestant by kind and library."""
-
-    def entry(self, label: str, n: int) -> Entry | None:
-        return next((e for e in self.entries if e.label == label and e.n == n), None)
-
-    def ratio(self, label: str, against: str, n: int) -> float:
-        """The time of ``against`` divided by that of ``label``."""
-        one, other = self.entry(label, n), self.entry(against, n)
-        assert one is not None
-        assert other is not None
-        return other.median / one.median
+SIZES = (64, 128, 256, 512, 1024, 2048)
+FEWEST_SUMMED = 256
+"""Numbers below which a sum is no limit: there the call itself is what takes the time."""
+ROUNDINGS = 16
+"""What two right results may differ by beside one rounding for each of n terms."""
 
 
 def race(
     specs: Iterable[Spec],
-    sizes: Sequence[int],
-    libraries: Sequence[Library],
+    sizes: Sequence[int] | None = None,
+    libraries: Sequence[Library] | None = None,
     *,
-    shape: Mapping[str, Any] | None = None,
+    kd: int | None = None,
+    ld: int | None = None,
     rounds: int = ROUNDS,
     slice_seconds: float = SLICE,
-    full: bool = False,
-    progress: Callable[[str, int, int], None] = lambda what, done, total: None,
+    whole: bool = False,
+    progress: Progress = silent,
 ) -> Race:
-    """Measures kernels against libraries and limits at each size, all by turns.
+    """Measures kernels against libraries and limits at each size n, all by turns.
 
-    ``shape`` gives sizes beside n (``kd``, ``ld``); kernels of a fixed n run at that n alone.
-    With ``full`` a library's product with the whole matrix runs too.
+    Every kernel is verified first, and its result is compared with that of each library. Kernels
+    of a fixed n run at that n alone. ``libraries`` are all of this machine unless they are given;
+    ``kd`` and ``ld`` are for kernels that leave them open. A contestant runs for ``slice_seconds``
+    (and five calls) before the next one does, in so many ``rounds``. With ``whole`` a library's
+    product with all n*n elements runs too. Everything has as many threads as the kernel is
+    specified for: one, unless it says more.
     """
-    plans = [make_plan(spec) for spec in specs]
-    paths = [_compiled(plan) for plan in plans]
-    found = Race(machine_of(libraries))
-    wanted = sorted({*sizes, *(int(p.spec.layout.n) for p in plans if p.spec.layout.n != RUNTIME)})
-    for one in libraries:
-        one.one_thread()
+    specs = list(specs)
+    if rounds < 1 or not slice_seconds > 0:
+        raise InputError("at least one round and slices of some seconds are needed")
+    shape = {name: size for name, size in (("kd", kd), ("ld", ld)) if size is not None}
+    shaped(specs, shape)
+    wanted = _sizes(specs, sizes)
+    peers = all_libraries() if libraries is None else list(libraries)
+    runs, left_out = entrants(specs, progress)
+    found = Race(machine(peers), _now(), rounds, slice_seconds, _described(runs), left_out=left_out)
     for done, n in enumerate(wanted):
-        progress(f"n = {n}", done, len(wanted))
-        here = [
-            (plan, path) for plan, path in zip(plans, paths, strict=True)
-            if plan.spec.layout.n == n or (plan.spec.layout.n == RUNTIME and n in sizes)
-        ]  # fmt: skip
-        _at(found, here, n, libraries, shape or {}, rounds, slice_seconds, full)
+        here = [one for one in runs if one.plan.spec.layout.n == n]
+        if sizes is None or n in sizes:
+            here += [one for one in runs if one.plan.spec.layout.n == RUNTIME]
+        if here:
+            progress(f"n = {n}", done, len(wanted))
+            one = _Size(found, here, n, peers, shape, whole)
+            one.compare()
+            one.measure(
+                lambda turn: progress(f"n = {n}, round {turn} of {rounds}", done, len(wanted))
+            )
     progress("done", len(wanted), len(wanted))
     return found
 
 
-def _compiled(plan: Plan) -> Any:
-    files = render([plan], plan.spec.file, plan.spec.language)
-    if plan.spec.language != "c":
-        raise InputError(
-            f'{plan.spec.name}: only kernels in C are raced, not in "{plan.spec.language}"'
-        )
-    return compiled(find_compiler(), [plan], files)
+def _sizes(specs: Sequence[Spec], sizes: Sequence[int] | None) -> list[int]:
+    """The sizes to run at, those that specifications fix among them."""
+    fixed = {int(spec.layout.n) for spec in specs if spec.layout.n != RUNTIME}
+    leaves_open = any(spec.layout.n == RUNTIME for spec in specs)
+    if sizes is not None:
+        wrong = [n for n in sizes if n < 1]
+        if wrong or not sizes:
+            raise InputError(f"sizes are whole numbers from 1, not {wrong[0] if wrong else 'none'}")
+        if not leaves_open:
+            raise InputError("every kernel has a fixed n; no sizes can be told for the race")
+    return sorted(fixed | set((SIZES if sizes is None else sizes) if leaves_open else ()))
 
 
-def _at(
-    found: Race,
-    kernels: list[tuple[Plan, Any]],
-    n: int,
-    libraries: Sequence[Library],
-    shape: Mapping[str, Any],
-    rounds: int,
-    slice_seconds: float,
-    full: bool,
-) -> None:
-    contestants: dict[str, tuple[str, Contestant]] = {}
-    shared: dict[Any, Array] = {}
-    for plan, path in kernels:
-        spec = plan.spec
-        values = values_for(plan, n, shape, shared)
-        label = spec.name
-        contestants[label] = ("kernel", kernel_contestant(label, plan, path, values))
-        peers = found.peers.setdefault((label, n), {})
-        for one in libraries:
-            routine = routine_for(spec)
-            peer = f"{one.name} {routine} {stored_for_fortran(spec)}"
-            if peer not in contestants:
-                other = library_contestant(peer, one, spec, values)
-                if other is not None:
-                    contestants[peer] = ("library", other)
-            if peer in contestants:
-                peers[one.name] = peer
-            if full and spec.operation.name == "matvec" and spec.layout.whole:
-                whole = f"{one.name} full {spec.arithmetic.dtype}"
-                if whole not in contestants:
-                    dtype = spec.arithmetic.dtype
-                    matrix = _random(shared, ("whole", dtype), n * n, dtype)
-                    entry = full_product(whole, one, dtype, {**values, "whole": matrix})
-                    if entry is not None:
-                        contestants[whole] = ("full", entry)
-                peers[f"{one.name} full"] = whole
-        real = spec.arithmetic.real
-        count = stored(plan, values) * spec.arithmetic.type.parts
-        limit = f"sum of {count} {real}"
-        if limit not in contestants and not spec.arithmetic.type.integer:
-            name = f"sum_{native().name}_{real}"
-            array = _random(shared, ("sum", real), count, real)
-            contestants[limit] = ("sum", limit_contestant(limit, name, array, count))
-        peers["sum"] = limit
-        found.flops[label, n] = useful(plan, values)
-    driver = Driver(one for _, one in contestants.values())
-    seconds = driver.interleaved(rounds, slice_seconds)
-    for place, (label, (kind, _)) in enumerate(contestants.items()):
-        found.entries.append(Entry(label, kind, n, tuple(map(float, seconds[:, place]))))
+def _now() -> str:
+    return datetime.datetime.now(datetime.UTC).isoformat(timespec="seconds")
 
 
-def values_for(
-    plan: Plan, n: int, shape: Mapping[str, Any], shared: dict[Any, Array]
-) -> dict[str, Any]:
-    """Values for every parameter of a kernel at size n; arrays are aligned and shared."""
-    layout = plan.spec.layout
-    sizes = {**layout.fixed_sizes(), **layout.sample(n)}
-    if shape:
-        sizes = layout.complete({**{k: v for k, v in sizes.items() if k != "ld"}, **shape})
-    values: dict[str, Any] = {"incx": 1, "incy": 1, **sizes}
-    env = layout.environment(values)
-    for one in plan.parameters:
-        if one.kind == "scalar":
-            values[one.name] = SCALARS[one.name]
-        elif one.kind == "array":
-            assert one.extent is not None
-            count = max(1, one.extent.value({"incx": 1, "incy": 1, **env}))
-            dtype = plan.spec.arithmetic.dtype if one.name in "axys" else one.type
-            key = (one.name, dtype, layout.name if one.name == "a" else "")
-            values[one.name] = _random(
-                shared, key, count * (one.parts if one.name == "work" else 1), dtype
-            )
-        elif one.kind == "places":
-            values[one.name] = np.ascontiguousarray(sizes[one.name], dtype=np.intp)
-    for name in ("alpha", "beta"):
-        fixed = getattr(plan.spec.operation, name, None)
-        values.setdefault(name, 1.0 if fixed is None else fixed)
-    if "ld" not in values and layout.two_dimensional:
-        values["ld"] = layout.leading.value(env)
-    if "kd" not in values and hasattr(layout, "kd"):
-        values["kd"] = layout.kd
-    values.setdefault("n", n)
-    return values
-
-
-def _random(shared: dict[Any, Array], key: Any, count: int, dtype: str) -> Array:
-    """An array of small random numbers, at a multiple of 64 bytes, shared by its key."""
-    if key in shared and len(shared[key]) >= count:
-        return shared[key]
-    size = np.dtype(dtype).itemsize
-    raw = np.empty(count * size + ALIGNMENT, dtype=np.uint8)
-    offset = -raw.__array_interface__["data"][0] % ALIGNMENT
-    array = raw[offset : offset + count * size].view(dtype)
-    generator = np.random.default_rng(1)
-    real = array.view(np.dtype(dtype).type(0).real.dtype)
-    chunk = generator.standard_normal(min(len(real), 1 << 16)) * 2.0**-10
-    for start in range(0, len(real), len(chunk)):
-        real[start : start + len(chunk)] = chunk[: len(real) - start]
-    shared[key] = array
-    return array
-
-
-def stored(plan: Plan, values: Mapping[str, Any]) -> int:
-    """The elements of the stored half."""
-    layout, n = plan.spec.layout, int(values["n"])
-    if layout.whole:
-        return n * (n + 1) // 2
-    if "kd" in values:
-        kd = min(int(values["kd"]), n - 1)
-        return n * (kd + 1) - kd * (kd + 1) // 2
-    return sum(high - low for _, low, high, _ in layout.strips(values))
-
-
-def useful(plan: Plan, values: Mapping[str, Any]) -> int:
-    """The operations that the job needs: two for each use of a stored element."""
-    spec, n = plan.spec, values["n"]
-    half = stored(plan, values)
-    factor = 4 if spec.arithmetic.type.complex else 1
-    uses = half if spec.operation.name == "rank1" else 2 * half - n
-    return 2 * factor * uses
-
-
-def machine_of(libraries: Sequence[Library]) -> dict[str, Any]:
-    """What was measured on: processor, caches, compiler, libraries."""
-    compiler: Compiler = find_compiler()
+def _described(runs: Iterable[Entrant]) -> dict[str, dict[str, Any]]:
+    """The specifications and how the kernels were compiled."""
+    compiler = find_compiler()
     return {
-        "processor": _processor(),
-        "machine": platform.machine(),
-        "cores": os.cpu_count(),
-        "instructions": native().name,
-        "can run": [name for name, one in INSTRUCTION_SETS.items() if one.here],
-        "caches": _caches(),
-        "compiler": compiler.version,
-        "libraries": {one.name: one.configuration for one in libraries},
-        "bytes of elements": dict(REAL_SIZE),
+        one.plan.spec.name: {
+            **one.plan.spec.stated,
+            "compiler flags": " ".join(flags_for(compiler, [one.plan])),
+        }
+        for one in runs
     }
 
 
-def _processor() -> str:
-    try:
-        with open("/proc/cpuinfo", encoding="ascii", errors="ignore") as lines:  # noqa: PTH123
-            names = [
-                line.partition(":")[2].strip() for line in lines if line.startswith("model name")
-            ]
-    except OSError:
-        names = []
-    return names[0] if names else platform.processor() or "unknown"
+@dataclass
+class _Runner:
+    """A kernel at the size that is measured, and the places of what it is held against."""
+
+    entrant: Entrant
+    sizes: dict[str, Any]
+    place: int = -1
+    sum: int | None = None
+    peak: tuple[int, int] | None = None
+    peers: dict[str, int] = field(default_factory=dict)
+    whole: dict[str, int] = field(default_factory=dict)
 
 
-def _caches() -> dict[str, str]:
-    from pathlib import Path
+class _Size:
+    """All that happens at one size."""
 
-    found = {}
-    for index in sorted(Path("/sys/devices/system/cpu/cpu0/cache").glob("index*")):
-        try:
-            kind = (index / "type").read_text().strip()
-            level, size = (
-                (index / "level").read_text().strip(),
-                (index / "size").read_text().strip(),
+    def __init__(
+        self,
+        found: Race,
+        kernels: Sequence[Entrant],
+        n: int,
+        libraries: Sequence[Library],
+        shape: Mapping[str, int],
+        whole: bool,
+    ) -> None:
+        self.found, self.n, self.libraries = found, n, libraries
+        self.contestants: list[Contestant] = []
+        self.kinds: list[str] = []
+        self._places: dict[Any, int] = {}
+        self.memory = Memory()
+        self.runners = [_Runner(one, sizes_at(one.plan.spec, n, shape)) for one in kernels]
+        self.with_whole = {
+            id(one)
+            for one in self.runners
+            if whole and (spec := one.entrant.plan.spec).operation.name == "matvec"
+            and spec.layout.whole and spec.arithmetic.dtype in LETTERS
+        }  # fmt: skip
+        for one in self.runners:
+            self.memory.reserve_for(one.entrant.plan, one.sizes)
+            dtype = one.entrant.plan.spec.arithmetic.dtype
+            self.memory.reserve("a", dtype, stored(one.entrant.plan, one.sizes))
+            if id(one) in self.with_whole:
+                self.memory.reserve("a", dtype, n * n)
+        self.memory.check(n)
+        for one in self.runners:
+            self._enter(one)
+        self.driver = Driver(self.contestants)
+
+    def _add(self, kind: str, key: Any, make: Any) -> int | None:
+        """The place of a contestant, which is made unless it is there already."""
+        if key not in self._places:
+            made = make()
+            if made is None:
+                return None
+            for number in range(2, len(self.contestants) + 2):
+                if all(one.label != made.label for one in self.contestants):
+                    break
+                made.label = f"{made.label.split(' #')[0]} #{number}"
+            self._places[key] = len(self.contestants)
+            self.contestants.append(made)
+            self.kinds.append(kind)
+        return self._places[key]
+
+    def _enter(self, one: _Runner) -> None:
+        plan, spec = one.entrant.plan, one.entrant.plan.spec
+        values = values_for(plan, one.sizes, self.memory)
+        kernel = kernel_contestant(plan, one.entrant.path, values)
+        one.place = self._add("kernel", spec.name, lambda: kernel) or 0
+        threads = spec.schedule.threads
+        for library in self.libraries:
+            peer = library_contestant(library, spec, values)
+            if peer is not None:
+                key: Any = (peer.address, threads, peer.plain_arguments[1:], peer.label)
+                place = self._add("library", key, lambda: peer)
+                if place is not None:
+                    one.peers[library.name] = place
+            if id(one) in self.with_whole:
+                dtype = spec.arithmetic.dtype
+                matrix = {**values, "whole": self.memory.array("a", dtype)[: self.n**2]}
+                key = ("whole", library.name, dtype, threads)
+                place = self._add("whole", key, lambda: whole_contestant(library, spec, matrix))
+                if place is not None:
+                    one.whole[library.name] = place
+        if not spec.arithmetic.type.integer:
+            self._limits(one)
+
+    def _limits(self, one: _Runner) -> None:
+        plan, arithmetic = one.entrant.plan, one.entrant.plan.spec.arithmetic
+        real = arithmetic.real
+        peak, operations = peak_contestant(real)
+        place = self._add("peak", ("peak", real), lambda: peak)
+        one.peak = None if place is None else (place, operations)
+        count = stored(plan, one.sizes) * arithmetic.type.parts
+        if count >= FEWEST_SUMMED:
+            array = self.memory.array("a", arithmetic.dtype).view(real)
+            one.sum = self._add("sum", (real, count), lambda: sum_contestant(real, array, count))
+
+    def measure(self, told: Callable[[int], None]) -> None:
+        """Times everything, and notes what it found; ``told`` hears of each round."""
+        driver = self.driver
+        calls = [driver.calls(e, self.found.slice_seconds) for e in range(len(self.contestants))]
+        seconds, disturbed = driver.interleaved(calls, self.found.rounds, told)
+        timings = [
+            Timing(one.label, kind, self.n, count, late, tuple(map(float, column)))
+            for one, kind, count, late, column in zip(
+                self.contestants, self.kinds, calls, disturbed, seconds.T, strict=True
             )
-        except OSError:
-            continue
-        if kind != "Instruction":
-            found[f"level {level}"] = size
-    return found
+        ]
+        self.found.timings += timings
+        for one in self.runners:
+            self.found.rows.append(self._row(one, timings))
+
+    def _row(self, one: _Runner, timings: list[Timing]) -> Row:
+        plan = one.entrant.plan
+        return Row(
+            kernel=plan.spec.name,
+            n=self.n,
+            sizes={name: int(one.sizes[name]) for name in ("kd", "ld") if name in one.sizes},
+            operations=useful(plan, one.sizes),
+            bytes=stored(plan, one.sizes) * plan.spec.arithmetic.type.size,
+            time=timings[one.place],
+            sum=None if one.sum is None else timings[one.sum],
+            peak=None if one.peak is None else one.peak[1] / timings[one.peak[0]].median,
+            peers={name: timings[place] for name, place in one.peers.items()},
+            whole={name: timings[place] for name, place in one.whole.items()},
+        )
+
+    # --- are all doing the same job? ---------------------------------------------------------
+
+    def compare(self) -> None:
+        """Leaves out libraries with another result, and kernels whose bits change with threads."""
+        for one in list(self.runners):
+            spec = one.entrant.plan.spec
+            terms = 1 if spec.operation.name == "rank1" else self.n
+            if not one.peers and not one.whole and spec.schedule.threads == 1:
+                continue
+            allowed = (terms + ROUNDINGS) * float(np.finfo(spec.arithmetic.real).eps)
+            ours = self.driver.results(one.place)
+            self._keep_alike(one.peers, ours, f"that of {spec.name}", allowed)
+            if one.whole:
+                dtype, n = spec.arithmetic.dtype, self.n
+                matrix = self.memory.array("a", dtype)[: n * n].reshape(n, n, order="F")
+                product = matrix @ self.memory.array("x", dtype)[:n]
+                self._keep_alike(one.whole, product, "that of numpy", allowed)
+            if spec.schedule.threads > 1 and not self._same_bits_alone(one, ours):
+                self._leave_out(spec.name, f"its bits change with threads at n = {self.n}")
+                self.runners.remove(one)
+
+    def _keep_alike(self, others: dict[str, int], ours: Array, whose: str, allowed: float) -> None:
+        for name, place in list(others.items()):
+            apart = _apart(ours, self.driver.results(place)[: len(ours)])
+            if not apart <= allowed:
+                del others[name]
+                reason = (
+                    f"its result is not {whose} at n = {self.n}: they differ by "
+                    f"{apart:.1e} of the whole, and rounding explains {allowed:.1e}"
+                )
+                self._leave_out(self.contestants[place].label, reason)
+
+    def _same_bits_alone(self, one: _Runner, ours: Array) -> bool:
+        """Whether one thread gives the same bits as all of them."""
+        contestant = self.contestants[one.place]
+        prepare = contestant.prepare
+        contestant.prepare = lambda: set_team(one.entrant.path, 1)
+        alone = self.driver.results(one.place)
+        contestant.prepare = prepare
+        return alone.tobytes() == ours.tobytes()
+
+    def _leave_out(self, name: str, reason: str) -> None:
+        self.found.left_out.append(LeftOut(name, reason, fault=True))
+
+
+def _apart(ours: Array, theirs: Array) -> float:
+    """The difference of two results, as a part of the first."""
+    apart, size = float(np.linalg.norm(theirs - ours)), float(np.linalg.norm(ours))
+    return apart / size if apart and size else apart

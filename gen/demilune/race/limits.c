@@ -15,8 +15,11 @@
             s0 += p[0], s1 += p[1], s2 += p[2], s3 += p[3];                                     \
             s4 += p[4], s5 += p[5], s6 += p[6], s7 += p[7];                                     \
         }                                                                                       \
+        for (; i + L <= n; i += L) {                                                            \
+            s0 += *(const NAME##_t *)(a + i);                                                   \
+        }                                                                                       \
         s0 = ((s0 + s1) + (s2 + s3)) + ((s4 + s5) + (s6 + s7));                                 \
-        double total = 0;                                                                       \
+        TYPE total = 0;                                                                         \
         for (int l = 0; l < L; l++) {                                                           \
             total += s0[l];                                                                     \
         }                                                                                       \
