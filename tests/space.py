@@ -87,8 +87,10 @@ def draw(choose: Choose) -> dict[str, Any]:
     if integer:
         accumulators += ["int64", "int32"]
     plain = take("accumulator", accumulators) == "plain"
-    beside = v["loop"] == "fused" or operation == "rank1" or (
-        operation == "matvec" and v["loop"] == "dot" and layout == "band"
+    beside = (
+        v["loop"] == "fused"
+        or operation == "rank1"
+        or (operation == "matvec" and v["loop"] == "dot" and layout == "band")
     )
     lanes = take("lanes", LANES if plain and beside and forward and not integer else (1,))
     take("fma", (False,) if integer else (False, True))

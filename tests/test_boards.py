@@ -303,8 +303,7 @@ def test_flushed_subnormal_numbers_are_noticed(host):
     if platform.machine() != "x86_64":
         pytest.skip("the mode is set by an instruction of x86-64")
     flush = (
-        "__attribute__((constructor)) static void flush(void)\n"
-        "{ __builtin_ia32_ldmxcsr(0x9fc0); }"
+        "__attribute__((constructor)) static void flush(void)\n{ __builtin_ia32_ldmxcsr(0x9fc0); }"
     )
     report = check_on(replace(host, start=flush), [plan_of(**PACKED)], measure=False)
     assert report.verdict == "differs"

@@ -85,7 +85,7 @@ int main(void)
 
 PLAIN: list[tuple[str, dict[str, Any]]] = [
     ("sum", {"loop": "dot"}),
-    ("single", {"loop": "dot", "n": 1, "unroll": "all"}),
+    ("single", {"loop": "dot", "n": 1, "unroll": 1}),
     ("wide", {"loop": "fused", "dtype": "float32", "accumulator": "wide"}),
     ("careful", {"loop": "axpy", "accumulator": "compensated", "block": 2}),
 ]

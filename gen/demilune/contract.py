@@ -22,6 +22,8 @@ if TYPE_CHECKING:
     from demilune.spec import Spec
 
 COLUMNS = 84
+LARGEST_UNIT = 64
+"""A formula for the costs holds for multiples of a unit; above this it says too little."""
 CAUTION = (
     "Evidence is not certification. Where lives or property depend on the result, the applicable "
     "standards, local codes and qualified people decide."
@@ -190,6 +192,9 @@ def costs(plan: Plan) -> list[str]:
         return lines
     step, tile = spec.schedule.block, spec.layout.period
     unit = lcm(step, tile, spec.arithmetic.lanes * spec.schedule.steps)
+    if unit > LARGEST_UNIT:
+        sizes = (16, 64, 256)
+        return [f"{start}n = {n}: {_cost_line(flat(plan, spec.layout.sample(n)))}" for n in sizes]
     points = {n: flat(plan, spec.layout.sample(n)) for n in (unit * k for k in (2, 3, 4, 5, 7, 8))}
     names = [name for name in next(iter(points.values())) if name != "bytes of locals"]
     formulas = {

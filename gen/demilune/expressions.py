@@ -143,7 +143,7 @@ class ExpressionWriter:
         """The call of a primitive for values with lanes."""
         if isinstance(value, Load | Store):
             stride = value.stride.constant
-            if isinstance(value, Load) and value.part is None and stride in NEAR:
+            if isinstance(value, Load) and value.dense and value.part is None and stride in NEAR:
                 name, arguments = f"{name}_by{stride}", [arguments[0], arguments[1], *arguments[3:]]
             elif stride != 1:
                 name += "_strided"

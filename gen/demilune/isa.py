@@ -120,3 +120,11 @@ def chosen_at_run_time() -> list[InstructionSet]:
     """The x86-64 sets that one file can hold together, the best first, the portable last."""
     kept = [one for one in INSTRUCTION_SETS.values() if not one.machines or one.flags]
     return sorted(kept, key=lambda one: -one.rank)
+
+
+def is_primitive(name: str) -> bool:
+    """Whether a file with lanes may use the name itself."""
+    if re.search(r"float(32|64)x\d+", name):
+        return True
+    return any(name == one or name.startswith(f"{one}_") for s in INSTRUCTION_SETS.values()
+               for one in s.helpers)  # fmt: skip

@@ -82,7 +82,8 @@ class _Renderer(ExpressionWriter):
             functions.update({one.name: one for one in plan.routine.functions})
         sets = self.plans[0].spec.target.instruction_sets
         variants = [self._variant(isa, len(sets) > 1) for isa in sets]
-        routines = [self._routine(plan) for plan in self.plans]
+        alone = len(variants) == 1
+        routines = variants[0]["routines"] if alone else [self._routine(p) for p in self.plans]
         written = [self._function(one) for one in functions.values()]
         types = self._types()
         context = {
@@ -132,6 +133,8 @@ class _Renderer(ExpressionWriter):
             return facts
         macro = templates().get_template(f"{self.language.name}/lanes.j2").module
         texts = [self._narrow(macro.primitive(facts, name)) for name in names]  # type: ignore[attr-defined]
+        if self.freestanding:  # no math.h
+            texts = [re.sub(r"\bfma(f?)\(", r"__builtin_fma\1(", one) for one in texts]
         called = isa.functions("\n".join(texts))
         helpers = {name: self._narrow(source) for name, source in called.items()}
         if self.suffix:  # another instruction set of the file may call its own the same
@@ -306,11 +309,13 @@ class _Renderer(ExpressionWriter):
         """The space to break at: as far out of brackets as there is one, then the last."""
         best: tuple[int, bool, int] | None = None
         start = len(text) - len(text.lstrip()) + 12
-        for place in range(start, WIDTH + 1):
-            inside = opened + _brackets(text[:place])
-            if text[place] == " " and (self.language.breaks_anywhere or inside > 0):
-                rank = (-inside, text[place - 1] in ",;", place)
-                best = max(best or rank, rank)
+        inside = opened
+        for place in range(WIDTH + 1):
+            if place >= start and text[place] == " ":
+                if self.language.breaks_anywhere or inside > 0:
+                    rank = (-inside, text[place - 1] in ",;", place)
+                    best = max(best or rank, rank)
+            inside += _brackets(text[place])
         return best[2] if best else None
 
 

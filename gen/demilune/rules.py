@@ -11,11 +11,13 @@ from typing import Any
 
 from demilune.dtypes import DTYPES
 from demilune.isa import INSTRUCTION_SETS, PORTABLE, chosen_at_run_time, native
-from demilune.keys import RUNTIME
+from demilune.keys import RUNTIME, defaults_of
+from demilune.layouts import LAYOUTS
 from demilune.schedules import ALL, LARGEST_UNROLLED
 
 WIDEST_BLOCK = 8
 """Strips at a time: more need more registers than there are."""
+TILE = defaults_of(LAYOUTS["tiled"])["tile"]
 SMALL = 16
 """Fixed sizes up to which lanes that do not divide them cost more than they gain."""
 
@@ -27,18 +29,33 @@ def filled(values: Mapping[str, Any]) -> dict[str, Any]:
     dtype = DTYPES.get(found.get("dtype", "float64"))
     if isa == PORTABLE or dtype is None or dtype.integer or "lanes" in found:
         return found
+    if not _plain(found):
+        return found
     sets = chosen_at_run_time() if isa == RUNTIME else [INSTRUCTION_SETS[isa]]
     widths = sorted({width for one in sets for width in one.widths(dtype.real)})
     n = found.get("n", RUNTIME)
     found["lanes"] = _lanes(widths, n)
+    tiled = found.get("layout") == "tiled"
     small = isinstance(n, int) and n <= LARGEST_UNROLLED
     if small and found.get("layout") != "skyline" and found.get("kd") != RUNTIME:
         found.setdefault("unroll", ALL)
     if found["lanes"] > 1:
-        most = [WIDEST_BLOCK, n, found.get("tile")] if isinstance(n, int) else [WIDEST_BLOCK]
+        most = [WIDEST_BLOCK, n, found.get("tile", TILE) if tiled else None]
         block = min([found["lanes"], *(one for one in most if isinstance(one, int))])
         found.setdefault("block", block)
     return found
+
+
+def _plain(values: Mapping[str, Any]) -> bool:
+    """Whether the rest of what is asked for can be done with lanes."""
+    band = values.get("layout") == "band"
+    update = values.get("operation") == "rank1"
+    loop = values.get("loop") or "fused"
+    return (
+        values.get("accumulator") in (None, "plain")
+        and values.get("direction", "forward") == "forward"
+        and (loop == "fused" or update or (band and loop == "dot"))
+    )
 
 
 def _lanes(widths: list[int], n: int | str) -> int:

@@ -16,6 +16,7 @@ from typing import Any
 
 from demilune.arithmetic import Arithmetic
 from demilune.errors import Problem, SpecError
+from demilune.isa import is_primitive
 from demilune.keys import Key, defaults_of, keys_of, nearest, pick
 from demilune.languages import LANGUAGES
 from demilune.layouts import LAYOUTS, Layout
@@ -171,7 +172,7 @@ def name_problems(name: str, what: str = "name") -> Iterator[Problem]:
         )
         return
     for language in LANGUAGES.values():
-        if name in language.reserved:
+        if name in language.reserved or (language.lanes and is_primitive(name)):
             yield Problem(
                 f'"{name}" is a reserved word or a name used inside routines in {language.title}',
                 name,

@@ -238,6 +238,13 @@ def _clashes(specs: list[Spec]) -> Iterator[Problem]:
             yield Problem(
                 f'the file "{spec.file}" has routines for both environments', spec.name, "file"
             )
+        elif other.target.isa != spec.target.isa:
+            yield Problem(
+                f'the file "{spec.file}" has routines for several instruction sets; give each a '
+                'file of its own, or use isa = "runtime"',
+                spec.name,
+                "file",
+            )
 
 
 # --- JSON Schema ---------------------------------------------------------------------------------

@@ -99,6 +99,8 @@ class Context:
     """The lanes that have an element; None is all."""
     stride: Expr = ONE
     """From the stored element of one lane to that of the next."""
+    dense: bool = False
+    """Whether all that lies between those elements belongs to the matrix."""
 
     @property
     def n(self) -> Expr:
@@ -193,7 +195,10 @@ class Context:
     def matrix(self, index: Expr, active: Active = None) -> Number:
         """The stored element at ``index``, in the type of the sums."""
         a = self.arithmetic
-        return convert(self.load("a", index, a.real, a.type.complex, self.stride, active), a.sums)
+        number = self.load("a", index, a.real, a.type.complex, self.stride, active)
+        if self.dense:
+            number = tuple(replace(one, dense=True) for one in number if isinstance(one, Load))
+        return convert(number, a.sums)
 
     def put_matrix(self, strip: Strip, index: Expr, number: Number) -> None:
         """Writes the stored element at ``index``, or those of a step that the strip has."""
@@ -211,7 +216,11 @@ class Context:
         narrow = replace(self, lanes=1, active=None)
         numbers = [narrow.matrix(place) for place in places]
         type = with_lanes(self.arithmetic.sums, self.lanes)
-        return tuple(Pack(tuple(number[part] for number in numbers), type) for part in range(parts))
+        packed = (Pack(tuple(n[part] for n in numbers), type) for part in range(parts))
+        if self.active is None or self.active[1].constant is not None:
+            return tuple(packed)
+        nought = self.spread(self.arithmetic.zero(1))[0]  # not the last element again and again
+        return tuple(Where(self.active, one, nought, type) for one in packed)
 
     def vector(self, name: str, i: Term) -> Number:
         """Element ``i`` of a vector, in its own type."""

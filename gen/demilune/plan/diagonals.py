@@ -65,7 +65,8 @@ class DiagonalWalk(Walk):
         for one in self._row(group):
             if isinstance(one, Diagonal):
                 place = one.place(first)
-                step = replace(self.c.wide(), stride=place.substitute({"k": first + 1}) - place)
+                apart = place.substitute({"k": first + 1}) - place
+                step = replace(self.c.wide(), stride=apart, dense=apart == width + 1)
                 for row in rows:
                     self.operation.diagonal(step, row, one.place(row.k))
                 continue
@@ -81,7 +82,7 @@ class DiagonalWalk(Walk):
     def _neighbours(self, piece: Piece, rows: list[Strip], width: Expr, ahead: bool) -> None:
         first, far = symbol("k"), symbol("d")
         step = piece.at(first + 1, first + 1 + far) - piece.at(first, first + far)
-        context = replace(self.c.wide(), stride=step)
+        context = replace(self.c.wide(), stride=step, dense=step == width + 1)
 
         def one(d: Expr) -> None:
             away = d - width if ahead else d + 1

@@ -226,7 +226,7 @@ class LaneWalk(Walk):
             return
         base = runs[0][0][0].k
         square = all(
-            (low - base).constant is not None and 0 <= (high - base).constant_or(-1) <= len(runs)
+            (low - base).constant_or(-1) >= 0 and 0 <= (high - base).constant_or(-1) <= len(runs)
             for _, low, high in runs
         )
         if square:

@@ -51,6 +51,8 @@ class Load:
     part: int | None = None
     stride: Expr = ONE
     active: Active = None
+    dense: bool = False
+    """Whether all elements between those of a stride belong to the matrix, and may be read."""
 
     @property
     def names(self) -> frozenset[str]:

@@ -200,8 +200,10 @@ class Walk:
         All runs together reach over at most so many indices, if that is known.
         """
         for one, low, high in runs:
-            if (high - low).constant != 0:
-                self._run(piece, low, high, [one])
+            # A run may be empty and end before it begins; several steps a pass need its length.
+            end = maximum(low, high) if self.steps > 1 else high
+            if (end - low).constant != 0:
+                self._run(piece, low, end, [one])
 
     def _named(self, piece: Piece, strip: Strip) -> Named:
         """The strip with the place of its element at index m, its constant part named."""
